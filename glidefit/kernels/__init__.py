@@ -1,0 +1,1 @@
+"""Physics, mathematics and image arithmetic: arrays in, arrays out."""

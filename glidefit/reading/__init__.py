@@ -1,0 +1,1 @@
+"""Files in: assay sheets, track tables, videos, settings."""

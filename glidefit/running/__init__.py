@@ -1,0 +1,1 @@
+"""Workers, progress and the run folder."""

@@ -1,0 +1,1 @@
+"""The analysis: one public function a step, no step imports another."""
