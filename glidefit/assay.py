@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+import dataclasses
+from dataclasses import dataclass
 from pathlib import Path
 
 
@@ -31,8 +32,8 @@ class Recording:
     last_frame: int | None = None
     channel: int | None = None
     position: int | None = None
-    numbers: dict[str, float] = field(default_factory=dict)  # numeric columns with a unit suffix
-    labels: dict[str, str] = field(default_factory=dict)  # every other column
+    numbers: dict[str, float] = dataclasses.field(default_factory=dict)  # numeric columns with a unit suffix
+    labels: dict[str, str] = dataclasses.field(default_factory=dict)  # every other column
     where: str = ""  # "assay.csv, row 3"
 
     @property
