@@ -32,7 +32,9 @@ class Recording:
     last_frame: int | None = None
     channel: int | None = None
     position: int | None = None
-    numbers: dict[str, float] = dataclasses.field(default_factory=dict)  # numeric columns with a unit suffix
+    numbers: dict[str, float] = dataclasses.field(
+        default_factory=dict
+    )  # numeric columns with a unit suffix
     labels: dict[str, str] = dataclasses.field(default_factory=dict)  # every other column
     where: str = ""  # "assay.csv, row 3"
 

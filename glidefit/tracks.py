@@ -50,7 +50,11 @@ class Tracks:
 
     def __post_init__(self) -> None:
         n = len(self.frame)
-        if len(self.offsets) != len(self.label) + 1 or self.offsets[0] != 0 or self.offsets[-1] != n:
+        if (
+            len(self.offsets) != len(self.label) + 1
+            or self.offsets[0] != 0
+            or self.offsets[-1] != n
+        ):
             raise ValueError(f"offsets do not cut {n} rows into {len(self.label)} tracks")
         if np.any(np.diff(self.offsets) < 1):
             raise ValueError("a track without a position")
