@@ -1,0 +1,272 @@
+"""One recording from file to clean tracks: the unit of work that workers share."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from glidefit.assay import Recording
+from glidefit.errors import InputError
+from glidefit.evidence import REASONS, CleanRecording
+from glidefit.results import RecordingResult
+from glidefit.running.checksums import sha256
+from glidefit.settings import Settings
+from glidefit.tracks import Tracks
+
+# The sheet and the file may differ by this share before it is a contradiction.
+_AGREE = 0.01
+# The box around all tracks is a little smaller than the field they were seen in.
+_BOX_MARGIN = 1.02
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Task:
+    """A recording and the settings it is read with."""
+
+    recording: Recording
+    settings: Settings
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Tracked:
+    """Tracks of one recording as read or made from its video, before cleaning."""
+
+    tracks: Tracks
+    kind: str  # "video" or "track table"
+    n_frames: int
+    frame_s: float
+    frame_s_source: str
+    pixel_um: float  # NaN for a table in µm
+    pixel_um_source: str
+    exposure_s: float  # NaN if unknown
+    exposure_source: str
+    field_um: tuple[float, float]
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Prepared:
+    """A cleaned recording, and its row of the results."""
+
+    clean: CleanRecording
+    result: RecordingResult
+
+
+def track(task: Task) -> Tracked:
+    """Tracks of a recording: read from its table, or detected and linked in its video."""
+    return _from_video(task) if task.recording.is_video else _from_table(task)
+
+
+def prepare(task: Task) -> Prepared:
+    """Track and clean one recording."""
+    from glidefit.steps.clean import clean
+
+    recording, settings = task.recording, task.settings
+    tracked = track(task)
+    where = f"{recording.where}, {recording.name}"
+    cleaned = clean(tracked.tracks, frame_s=tracked.frame_s, settings=settings.clean, where=where)
+    exposure = tracked.exposure_s
+    if np.isnan(exposure):
+        exposure = settings.fit.unknown_exposure * tracked.frame_s
+    counted = {name: int((cleaned.reason == name).sum()) for name in REASONS}
+    return Prepared(
+        clean=CleanRecording(
+            recording=recording.name,
+            condition=recording.condition,
+            day=recording.day,
+            chamber=recording.chamber,
+            field=recording.field,
+            clean=cleaned,
+            frame_s=tracked.frame_s,
+            exposure_s=exposure,
+            field_um=tracked.field_um,
+            minutes=float("nan") if recording.minutes is None else recording.minutes,
+        ),
+        result=RecordingResult(
+            recording=recording.name,
+            condition=recording.condition,
+            day=recording.day,
+            chamber=recording.chamber,
+            kind=tracked.kind,
+            shape=recording.shape,
+            sha256=sha256(recording.path),
+            n_frames=tracked.n_frames,
+            frame_s=tracked.frame_s,
+            frame_s_source=tracked.frame_s_source,
+            pixel_um=tracked.pixel_um,
+            pixel_um_source=tracked.pixel_um_source,
+            exposure_s=tracked.exposure_s,
+            exposure_source=tracked.exposure_source,
+            field_um=tracked.field_um,
+            localization_error_um=cleaned.noise_um,
+            smallest_speed_um_s=cleaned.smallest_speed_um_s,
+            drift=cleaned.drift,
+            tracks_seen=cleaned.tracks.n_tracks,
+            tracks_kept=int(cleaned.kept.sum()),
+            set_aside=counted,
+            problems=tracked.notes,
+        ),
+    )
+
+
+def _from_table(task: Task) -> Tracked:
+    from glidefit.reading.track_table import read_track_table
+
+    recording, fit = task.recording, task.settings.fit
+    table = read_track_table(
+        recording.path,
+        columns=task.settings.columns,
+        frame_s=recording.frame_s,
+        pixel_um=recording.pixel_um,
+        where=recording.name,
+    )
+    tracks = _frame_range(table.tracks, recording)
+    exposure, source = _exposure(recording, None, table.frame_s)
+    box = float(np.ptp(tracks.x_um)) * _BOX_MARGIN, float(np.ptp(tracks.y_um)) * _BOX_MARGIN
+    width, height = fit.field_width or box[0], fit.field_height or box[1]
+    if width < box[0] / _BOX_MARGIN or height < box[1] / _BOX_MARGIN:
+        raise InputError(
+            f"{recording.where}, {recording.name}",
+            f"tracks extend over {box[0] / _BOX_MARGIN:.4g} × {box[1] / _BOX_MARGIN:.4g} µm",
+            expected=f"tracks inside the field of {width:.4g} × {height:.4g} µm",
+            remedy="Correct fit.field_width and fit.field_height, or the unit of the positions.",
+        )
+    return Tracked(
+        tracks=tracks,
+        kind="track table",
+        n_frames=int(tracks.frame.max()) + 1,
+        frame_s=table.frame_s,
+        frame_s_source=table.frame_s_source,
+        pixel_um=table.pixel_um,
+        pixel_um_source="" if np.isnan(table.pixel_um) else "sheet",
+        exposure_s=exposure,
+        exposure_source=source,
+        field_um=(width, height),
+        notes=table.notes,
+    )
+
+
+def _frame_range(tracks: Tracks, recording: Recording) -> Tracks:
+    """Only the frames that the sheet wants."""
+    first = recording.first_frame or 0
+    last = tracks.frame.max() if recording.last_frame is None else recording.last_frame
+    if first <= 0 and last >= tracks.frame.max():
+        return tracks
+    inside = (tracks.frame >= first) & (tracks.frame <= last)
+    if not inside.any():
+        raise InputError(
+            f"{recording.where}, {recording.name}",
+            f"frames {first} to {last} hold no position; the table ends at {tracks.frame.max()}",
+            expected="a range of frames with positions",
+            remedy="Correct first_frame and last_frame.",
+        )
+    table = tracks.to_frame()[inside].reset_index(drop=True)
+    table["frame"] -= first
+    return Tracks.from_frame(table)
+
+
+def _from_video(task: Task) -> Tracked:
+    from glidefit.reading.video import read_facts, read_frames
+    from glidefit.steps.detect import detect_spots
+    from glidefit.steps.link import link
+
+    recording, settings = task.recording, task.settings
+    where = f"{recording.where}, {recording.name}"
+    if recording.shape == "filament":
+        raise InputError(
+            where,
+            "the sheet says shape `filament` for a video",
+            expected="`spot`: filaments cannot be followed in videos yet, only spots that ride on "
+            "them",
+            remedy="Give a track table of the filaments instead.",
+        )
+    facts = read_facts(recording.path, channel=recording.channel, position=recording.position)
+    pixel_um, pixel_source = _agreed(
+        where, "pixel_um", "µm per pixel", recording.pixel_um, facts.pixel_um
+    )
+    frame_s, frame_source = _agreed(
+        where, "frame_s", "s between frames", recording.frame_s, facts.frame_s
+    )
+    exposure, exposure_source = _exposure(recording, facts.exposure_s, frame_s)
+    first = recording.first_frame or 0
+    last = facts.n_frames - 1 if recording.last_frame is None else recording.last_frame
+    if last >= facts.n_frames or last - first < 2:
+        raise InputError(
+            where,
+            f"frames {first} to {last} are wanted, the video has frames 0 to {facts.n_frames - 1}",
+            expected="at least three frames inside the video",
+            remedy="Correct first_frame and last_frame.",
+        )
+    frames = read_frames(
+        recording.path,
+        first=first,
+        last=last,
+        channel=recording.channel,
+        position=recording.position,
+    )
+    detections = detect_spots(frames, pixel_um=pixel_um, settings=settings.detect, where=where)
+    if len(detections.frame) == 0:
+        raise InputError(
+            where,
+            "no spot stands out of the noise in any frame",
+            expected=f"spots above {settings.detect.threshold:g} × noise",
+            remedy="Look at the video; lower detect.threshold or correct detect.spot_diameter.",
+        )
+    times = np.arange(detections.n_frames) * frame_s
+    if facts.times_s is not None:
+        times = facts.times_s[first : last + 1] - facts.times_s[first]
+    tracks, notes = link(detections, times_s=times, settings=settings.link, where=where)
+    return Tracked(
+        tracks=tracks,
+        kind="video",
+        n_frames=detections.n_frames,
+        frame_s=frame_s,
+        frame_s_source=frame_source,
+        pixel_um=pixel_um,
+        pixel_um_source=pixel_source,
+        exposure_s=exposure,
+        exposure_source=exposure_source,
+        field_um=(facts.width_px * pixel_um, facts.height_px * pixel_um),
+        notes=(*facts.notes, *notes),
+    )
+
+
+def _agreed(
+    where: str, column: str, unit: str, sheet: float | None, file: float | None
+) -> tuple[float, str]:
+    """A calibration from sheet or file; both may say it if they agree."""
+    if sheet is not None and file is not None and abs(sheet / file - 1) > _AGREE:
+        raise InputError(
+            where,
+            f"the sheet says {column} = {sheet:g}, the file says {file:g} {unit}",
+            expected="the same calibration in both",
+            remedy=f"Correct the sheet, or empty its {column} to take the file's.",
+        )
+    if sheet is not None:
+        return sheet, "sheet"
+    if file is not None:
+        return file, "file"
+    raise InputError(
+        where,
+        f"neither the sheet nor the file tells {unit}",
+        expected=f"a number of {unit}",
+        remedy=f"Fill the column {column} of the sheet.",
+    )
+
+
+def _exposure(recording: Recording, file: float | None, frame_s: float) -> tuple[float, str]:
+    """Exposure in s and its source; NaN if unknown."""
+    sheet = recording.exposure_s
+    value, source = (sheet, "sheet") if sheet is not None else (file, "file")
+    if value is None:
+        return float("nan"), "unknown"
+    if value > frame_s * (1 + 1e-6):
+        raise InputError(
+            f"{recording.where}, {recording.name}",
+            f"exposure_s = {value:g} s from the {source} is longer than the frame interval of "
+            f"{frame_s:g} s",
+            expected="an exposure that ends before the next frame begins",
+            remedy="Correct exposure_s or frame_s; both are in seconds.",
+        )
+    return value, source

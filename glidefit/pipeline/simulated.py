@@ -1,0 +1,48 @@
+"""Simulated assays through the same steps as filmed ones, without files in between."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from glidefit.evidence import CleanRecording
+from glidefit.pipeline.study import ConditionNumbers, condition_numbers
+from glidefit.settings import Settings
+from glidefit.steps.clean import clean
+from glidefit.steps.simulate import Scenario, SimulatedRecording, simulate_assay
+
+
+def cleaned(
+    recording: SimulatedRecording, scenario: Scenario, *, settings: Settings
+) -> CleanRecording:
+    """A simulated recording as the fit takes it; the field is the simulated one."""
+    return CleanRecording(
+        recording=recording.name,
+        condition=recording.condition,
+        day=recording.day,
+        chamber=recording.chamber,
+        field=recording.field,
+        clean=clean(
+            recording.tracks,
+            frame_s=scenario.frame_s,
+            settings=settings.clean,
+            where=recording.name,
+        ),
+        frame_s=scenario.frame_s,
+        exposure_s=scenario.exposure_s,
+        field_um=scenario.field_um,
+        minutes=recording.minutes,
+    )
+
+
+def experiment(
+    scenario: Scenario, *, settings: Settings, rng: np.random.Generator
+) -> dict[str, ConditionNumbers]:
+    """Simulate one assay and analyse it; by condition."""
+    assay = simulate_assay(scenario, rng)
+    recordings = [cleaned(r, scenario, settings=settings) for r in assay.recordings]
+    return {
+        condition.name: condition_numbers(
+            [r for r in recordings if r.condition == condition.name], settings=settings, rng=rng
+        )
+        for condition in scenario.conditions
+    }

@@ -1,0 +1,258 @@
+"""Set tracks aside that do not glide or cannot be trusted; measure and subtract stage drift."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from glidefit.errors import InputError
+from glidefit.evidence import (
+    DETACHED,
+    JUMP,
+    KEPT,
+    MIN_POSITIONS,
+    PIVOTING,
+    SHORT,
+    STUCK,
+    CleanTracks,
+)
+from glidefit.kernels import drift as drifting
+from glidefit.kernels import motion
+from glidefit.results import Drift
+from glidefit.settings import CleanSettings
+from glidefit.tracks import Tracks
+
+Floats = NDArray[np.float64]
+
+# A step is out of the noise from this many σ on.
+_STEP_NOISE = 8.0
+# Objects from which drift is taken must be seen for this share of the recording.
+_DRIFT_SHARE = 0.5
+# Drift is slower than this share of the typical gliding speed, and resting objects agree in
+# velocity to this share of it.
+_DRIFT_FASTEST, _DRIFT_SLACK = 0.3, 0.01
+# A short track at rest could be a glider if even half the typical speed would go unnoticed.
+_UNNOTICED_SHARE = 0.5
+
+
+def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str) -> CleanTracks:
+    """Verdict on every track of one recording.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        All tracks of the recording.
+    frame_s : float
+        Frame interval in s.
+    settings : CleanSettings
+    where : str
+        Names the recording in errors.
+
+    Raises
+    ------
+    InputError
+        If no track has three successive frames, so that the noise cannot be measured.
+    """
+    noise = _noise(tracks, where)
+    shift, drift = _drift(tracks, noise, frame_s, settings)
+    if drift.subtracted:
+        tracks = tracks.moved(
+            tracks.x_um - shift[0][tracks.frame], tracks.y_um - shift[1][tracks.frame]
+        )
+        noise = _noise(tracks, where)
+    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
+    reason = _reasons(tracks, measured, noise, settings)
+    duration = _duration(tracks, frame_s)
+    long_enough = tracks.n_positions >= MIN_POSITIONS
+    gliding = (reason == KEPT) & (measured.lag > 0)
+    typical = _median(measured.speed_um_frame[gliding]) / frame_s
+    noticed = motion.smallest_noticed_speed(
+        tracks.n_positions, duration, noise=noise, multiple=settings.stuck
+    )
+    undecided = (reason == STUCK) & (noticed > _UNNOTICED_SHARE * typical)
+    reason = np.where(undecided, KEPT, reason)
+    return CleanTracks(
+        tracks=tracks,
+        reason=reason.astype(np.str_),
+        decided=long_enough & ~undecided,
+        noise_um=noise,
+        typical_speed_um_s=typical,
+        smallest_speed_um_s=_median(noticed[long_enough]),
+        drift=drift,
+        drift_x_um=shift[0],
+        drift_y_um=shift[1],
+    )
+
+
+def _noise(tracks: Tracks, where: str) -> float:
+    each = motion.localization_noise(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um)
+    noise = motion.common_noise(each, tracks.n_positions)
+    if not np.isfinite(noise):
+        raise InputError(
+            where,
+            f"none of its {tracks.n_tracks} tracks has a position in three successive frames",
+            expected="tracks from which localization error can be told from motion",
+            remedy="Check the frame column, or film faster.",
+        )
+    return noise
+
+
+def _duration(tracks: Tracks, frame_s: float) -> Floats:
+    first, last = tracks.offsets[:-1], tracks.offsets[1:] - 1
+    return np.maximum(tracks.frame[last] - tracks.frame[first], 1) * frame_s
+
+
+def _median(values: Floats) -> float:
+    return float(np.median(values)) if len(values) else float("nan")
+
+
+def _reasons(
+    tracks: Tracks, measured: motion.Motion, noise: float, settings: CleanSettings
+) -> NDArray[np.str_]:
+    """One reason a track, the first that holds: short, stuck, jump, pivoting, detached."""
+    limit = motion.spread_limit(tracks.n_positions, multiple=settings.stuck)
+    rest = measured.spread_um <= limit * noise
+    advancing = ~rest & (measured.advance >= settings.advance)
+    # Where no pair of displacements exists, nothing speaks against an advance.
+    advancing |= ~rest & np.isnan(measured.advance)
+    n_frames = tracks.frame[tracks.offsets[1:] - 1] - tracks.frame[tracks.offsets[:-1]]
+    pivoting = ~rest & motion.in_place(measured, n_frames, extent=settings.pivot_extent)
+    detached = ~rest & ~advancing & ~pivoting
+    typical = _median(measured.speed_um_frame[advancing & ~pivoting & (measured.lag > 0)])
+    # Free diffusion makes long steps too: a jump also stands out of the track's own steps.
+    usual = np.fmax(typical, measured.median_step_um)
+    jump = measured.longest_step_um > settings.jump * usual + _STEP_NOISE * noise
+    reason = np.full(tracks.n_tracks, KEPT, dtype="U16")
+    for name, holds in (
+        (DETACHED, detached),
+        (PIVOTING, pivoting),
+        (JUMP, jump),
+        (STUCK, rest),
+        (SHORT, tracks.n_positions < MIN_POSITIONS),
+    ):
+        reason[holds] = name
+    return reason
+
+
+def _drift(
+    tracks: Tracks, noise: float, frame_s: float, settings: CleanSettings
+) -> tuple[tuple[Floats, Floats], Drift]:
+    n_frames = int(tracks.frame.max()) + 1
+    still = np.zeros(n_frames), np.zeros(n_frames)
+    if settings.drift == "off":
+        return still, _no_drift(0, "not measured: switched off")
+    together = _resting_objects(tracks, noise, settings)
+    n_objects = int(together.sum())
+    if n_objects < settings.drift_objects:
+        found = "none is" if n_objects == 0 else f"{n_objects} are"
+        note = f"not measured: {found} at rest for half the recording, "
+        return still, _no_drift(n_objects, note + f"{settings.drift_objects} are needed")
+    rest = tracks.select(together)
+    raw = [
+        drifting.common_displacement(rest.frame, rest.index, x, n_frames)
+        for x in (rest.x_um, rest.y_um)
+    ]
+    seen = np.bincount(rest.frame, minlength=n_frames)
+    significant = drifting.drift_is_significant(raw[0], raw[1], seen, noise=noise)
+    x, y = (d - d[0] for d in map(drifting.smooth, raw))
+    far = float(np.hypot(x, y).max())
+    return (x, y) if significant else still, Drift(
+        measured=True,
+        subtracted=significant,
+        n_objects=n_objects,
+        speed_um_s=float(np.hypot(x[-1], y[-1])) / max((n_frames - 1) * frame_s, frame_s),
+        largest_um=far,
+        note="subtracted" if significant else "not subtracted: within the noise",
+    )
+
+
+def _resting_objects(tracks: Tracks, noise: float, settings: CleanSettings) -> NDArray[np.bool_]:
+    """Tracks at rest on the stage: one common slow velocity, and no motion of their own."""
+    n_frames = int(tracks.frame.max()) + 1
+    velocity, error = drifting.track_velocities(
+        tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um
+    )
+    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
+    moving = (measured.lag > 0) & (measured.advance >= settings.advance)
+    typical = _median(measured.speed_um_frame[moving])
+    if not np.isfinite(typical):
+        typical = 0.0  # nothing advances: only noise separates the objects
+    together = drifting.resting_together(
+        velocity,
+        error,
+        noise=noise,
+        slack=_DRIFT_SLACK * typical,
+        fastest=_DRIFT_FASTEST * typical if typical else np.inf,
+        eligible=tracks.n_positions >= max(MIN_POSITIONS, _DRIFT_SHARE * n_frames),
+    )
+    if together.sum() < settings.drift_objects:
+        return together
+    rest = tracks.select(together)
+    own = []
+    for x in (rest.x_um, rest.y_um):
+        shift = drifting.common_displacement(rest.frame, rest.index, x, n_frames)
+        own.append(x - shift[rest.frame])
+    left = motion.measure(rest.frame, rest.offsets, own[0], own[1], noise=noise)
+    limit = motion.spread_limit(rest.n_positions, multiple=settings.stuck)
+    together[np.flatnonzero(together)[left.spread_um > limit * noise]] = False
+    return together
+
+
+def _no_drift(n_objects: int, note: str) -> Drift:
+    nan = float("nan")
+    return Drift(
+        measured=False,
+        subtracted=False,
+        n_objects=n_objects,
+        speed_um_s=nan,
+        largest_um=nan,
+        note=note,
+    )
+
+
+def closest_miss(
+    cleaned: CleanTracks, reason: str, *, settings: CleanSettings
+) -> tuple[float, str]:
+    """How near the best of the tracks with this reason came to being kept.
+
+    Returns
+    -------
+    nearness : float
+        Share of the limit that was reached; -inf if no track has the reason.
+    text : str
+        The rule, its limit, the best track and its value, and what to do.
+    """
+    chosen = cleaned.reason == reason
+    if not chosen.any():
+        return float("-inf"), ""
+    t, noise = cleaned.tracks, cleaned.noise_um
+    m = motion.measure(t.frame, t.offsets, t.x_um, t.y_um, noise=noise)
+    if reason == STUCK:
+        limit = motion.spread_limit(t.n_positions, multiple=settings.stuck)
+        reached, rule = m.spread_um / np.maximum(limit * noise, 1e-12), "clean.stuck"
+        what = "strays {value:.2g} × noise from its mean; it must exceed {limit:.3g} × noise"
+        value, bound = m.spread_um / max(noise, 1e-12), limit
+    elif reason == DETACHED:
+        reached, rule = m.advance / settings.advance, "clean.advance"
+        what = "has a mean cosine of {value:.2g} between displacements; it must reach {limit:.3g}"
+        value, bound = m.advance, np.full(t.n_tracks, settings.advance)
+    elif reason == PIVOTING:
+        reached, rule = m.extent_um / settings.pivot_extent, "clean.pivot_extent"
+        what = "goes round within {value:.2g} µm; beyond {limit:.3g} µm it would not pivot in place"
+        value, bound = m.extent_um, np.full(t.n_tracks, settings.pivot_extent)
+    elif reason == JUMP:
+        usual = np.fmax(cleaned.typical_speed_um_s, 0) + 0 * m.longest_step_um
+        reached, rule = -m.longest_step_um, "clean.jump"
+        what = "has a step of {value:.2g} µm in one frame"
+        value, bound = m.longest_step_um, usual
+    else:
+        reached, rule = t.n_positions / MIN_POSITIONS, "link.max_gap"
+        what = "has {value:.0f} positions; a track needs {limit:.0f}"
+        value, bound = t.n_positions.astype(float), np.full(t.n_tracks, float(MIN_POSITIONS))
+    reached = np.where(chosen & np.isfinite(reached), reached, -np.inf)
+    best = int(np.argmax(reached))
+    said = what.format(value=value[best], limit=bound[best])
+    return float(reached[best]), (
+        f"The nearest of the {int(chosen.sum())} {reason} tracks, {t.label[best]}, {said} "
+        f"({rule}). Look at the tracks; if they do glide, change that setting."
+    )

@@ -1,0 +1,339 @@
+"""Put one condition together: counts, estimates, curves, replicate means, problems, methods."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from glidefit.evidence import REASONS, SHORT, CleanRecording, Combined
+from glidefit.quantities import QUANTITIES
+from glidefit.results import (
+    NAN,
+    ChamberResult,
+    ConditionResult,
+    Counts,
+    Curve,
+    DrawnTrack,
+    Estimate,
+    LevelSpread,
+    TrackResult,
+)
+
+Floats = NDArray[np.float64]
+
+_NOT_IN_MODEL = {
+    "mean_speed_um_s": "not fitted: the active model knows no pauses",
+    "running_fraction": "not fitted: the active model knows no pauses",
+    "turning_rate_rad_s": "not fitted: the active model knows no circling",
+}
+_SPREAD_OF = {
+    "speed_um_s": "speed",
+    "rotational_diffusion_rad2_s": "rotational_diffusion",
+    "motile_fraction": "motile_fraction",
+}
+
+
+def counts(recordings: Sequence[CleanRecording]) -> Counts:
+    """Tracks and filament-frames, kept and set aside by reason."""
+    reason = np.concatenate([r.clean.reason for r in recordings])
+    frames = np.concatenate([r.clean.tracks.n_positions for r in recordings])
+    return Counts(
+        days=len({r.day for r in recordings}),
+        chambers=len({(r.day, r.chamber) for r in recordings}),
+        recordings=len(recordings),
+        tracks_seen=len(reason),
+        tracks_kept=int((reason == "").sum()),
+        set_aside={name: int((reason == name).sum()) for name in REASONS},
+        frames_seen=int(frames.sum()),
+        frames_kept=int(frames[reason == ""].sum()),
+        frames_set_aside={name: int(frames[reason == name].sum()) for name in REASONS},
+    )
+
+
+def all_estimates(known: Mapping[str, Estimate], *, level: float) -> dict[str, Estimate]:
+    """Every quantity in its order; those that were not obtained say why."""
+    missing = {key: Estimate(level=level, problem=why) for key, why in _NOT_IN_MODEL.items()}
+    nothing = Estimate(level=level, problem="no track was left to fit")
+    return {key: known.get(key) or missing.get(key) or nothing for key in QUANTITIES}
+
+
+def smallest_speed(recordings: Sequence[CleanRecording], *, level: float) -> Estimate:
+    """Median over recordings of the speed below which a track reads as stuck."""
+    each = [r.clean.smallest_speed_um_s for r in recordings]
+    return Estimate(
+        value=float(np.median(each)), level=level, method="threshold of the rule for stuck tracks"
+    )
+
+
+def curve(
+    lag_s: Floats,
+    fitted: NDArray[np.bool_],
+    frame_s: float,
+    measured: tuple[Floats, Floats, Floats],
+    model: tuple[Floats, Floats, Floats],
+) -> Curve:
+    """A curve of the page; points without pairs are left out."""
+    there = np.isfinite(measured[0])
+
+    def part(values: Floats) -> tuple[float, ...]:
+        return tuple(float(f"{value:.6g}") for value in values[there])
+
+    return Curve(
+        lag_s=part(lag_s),
+        value=part(measured[0]),
+        low=part(measured[1]),
+        high=part(measured[2]),
+        model=part(model[0]),
+        model_low=part(model[1]),
+        model_high=part(model[2]),
+        fitted=tuple(bool(f) for f in fitted[there]),
+        frame_s=frame_s,
+    )
+
+
+def chambers(
+    recordings: Sequence[CleanRecording],
+    values: Mapping[tuple[str, str], Mapping[str, float]],
+) -> tuple[ChamberResult, ...]:
+    """Replicate means. ``values``: by (day, chamber), the columns of fit and motility by name."""
+    keys = dict.fromkeys((r.day, r.chamber) for r in recordings)
+    out = []
+    for day, chamber in sorted(keys):
+        own = [r for r in recordings if (r.day, r.chamber) == (day, chamber)]
+        known = values.get((day, chamber), {})
+        out.append(
+            ChamberResult(
+                day=day,
+                chamber=chamber,
+                tracks_kept=sum(int(r.clean.kept.sum()) for r in own),
+                frames_kept=sum(int(r.clean.tracks.n_positions[r.clean.kept].sum()) for r in own),
+                speed_um_s=known.get("speed", NAN),
+                rotational_diffusion_rad2_s=known.get("rotational_diffusion", NAN),
+                motile_fraction=known.get("motile_fraction", NAN),
+                frame_speed_um_s=known.get("frame_speed", NAN),
+            )
+        )
+    return tuple(out)
+
+
+def tracks(
+    recordings: Sequence[CleanRecording], speeds: Mapping[str, Floats]
+) -> tuple[TrackResult, ...]:
+    """What every track says of itself, set-aside ones too."""
+    out = []
+    for r in recordings:
+        t, kept = r.clean.tracks, r.clean.kept
+        first, last = t.offsets[:-1], t.offsets[1:] - 1
+        duration = t.time_s[last] - t.time_s[first]
+        net = np.hypot(t.x_um[last] - t.x_um[first], t.y_um[last] - t.y_um[first])
+        speed = np.full(t.n_tracks, np.nan)
+        speed[kept] = speeds.get(r.recording, np.full(int(kept.sum()), np.nan))
+        out += [
+            TrackResult(
+                recording=r.recording,
+                day=r.day,
+                chamber=r.chamber,
+                track=str(t.label[k]),
+                kept=bool(kept[k]),
+                set_aside_reason=str(r.clean.reason[k]),
+                n_positions=int(t.n_positions[k]),
+                duration_s=_short(duration[k]),
+                net_advance_um=_short(net[k]),
+                path_um=_short(speed[k] * duration[k]),
+                speed_um_s=_short(speed[k]),
+            )
+            for k in range(t.n_tracks)
+        ]
+    return tuple(out)
+
+
+def _short(value: float) -> float:
+    return float(f"{value:.5g}")
+
+
+def drawn(recordings: Sequence[CleanRecording], *, most: int) -> tuple[DrawnTrack, ...]:
+    """Tracks thinned for drawing, at most so many, evenly taken."""
+    every = [(r, k) for r in recordings for k in range(r.clean.tracks.n_tracks)]
+    every = [(r, k) for r, k in every if r.clean.reason[k] != SHORT]
+    chosen = np.unique(np.linspace(0, len(every) - 1, min(most, len(every))).round().astype(int))
+    return tuple(_drawn(*every[i]) for i in chosen)
+
+
+def _drawn(r: CleanRecording, k: int) -> DrawnTrack:
+    t = r.clean.tracks
+    rows = t.rows(k)
+    x, y = t.x_um[rows], t.y_um[rows]
+    # A point every 0.7 % of the field is as fine as the drawing.
+    path = np.concatenate([[0.0], np.cumsum(np.hypot(np.diff(x), np.diff(y)))])
+    step = 0.007 * max(r.field_um)
+    wanted = np.arange(0.0, path[-1] + step, step)
+    keep = np.unique(np.minimum(np.searchsorted(path, wanted), len(x) - 1))
+    return DrawnTrack(
+        recording=r.recording,
+        track=str(t.label[k]),
+        reason=str(r.clean.reason[k]),
+        x_um=tuple(np.round(x[keep], 2).tolist()),
+        y_um=tuple(np.round(y[keep], 2).tolist()),
+    )
+
+
+def spread_by_level(combined: Combined, columns: Mapping[str, int]) -> tuple[LevelSpread, ...]:
+    """What each level brings to the standard error of the main quantities, relative to them."""
+    return tuple(
+        LevelSpread(
+            quantity=quantity,
+            level=level,
+            units=combined.level_units[level],
+            relative_error=float(error[columns[name]] / combined.value[columns[name]]),
+        )
+        for quantity, name in _SPREAD_OF.items()
+        if name in columns
+        for level, error in combined.level_error.items()
+    )
+
+
+def generalises(condition: str, combined: Combined, preparations: Sequence[str]) -> str:
+    """One sentence: to what the intervals generalise."""
+    days, n_chambers = combined.level_units["days"], combined.level_units["chambers"]
+    if combined.covers == "days":
+        named = {p for p in preparations if p}
+        if len(named) == 1 and all(preparations):
+            return (
+                f"The intervals cover other days with the same preparation ({named.pop()}): "
+                f"{days} days repeat the day, not the preparation."
+            )
+        return f"The intervals cover other days like these {days}."
+    if combined.covers == "chambers":
+        return (
+            f"All {n_chambers} chambers are of one day: the intervals cover other chambers of that "
+            "day, not other days. Film on further days to say more."
+        )
+    return (
+        "There is one chamber, so no interval can be given: how much another chamber would differ "
+        "has not been seen. Film at least a second chamber, better a second day."
+    )
+
+
+def problems(
+    *,
+    estimates: Mapping[str, Estimate],
+    combined: Combined,
+    columns: Mapping[str, int],
+    msd: Sequence[Curve],
+    fit_problems: Sequence[str],
+    undecided: int,
+) -> list[str]:
+    """What a reader must know before quoting the numbers, in plain words."""
+    out = [f"Not fitted, and left out of the means: {problem}." for problem in fit_problems]
+    out += _misfit(msd)
+    out += _headings_disagree(estimates, combined, columns)
+    if undecided:
+        out.append(
+            f"{undecided} tracks are too short to tell gliding from rest; they are kept and do not "
+            "count in the motile fraction."
+        )
+    return out
+
+
+def _misfit(msd: Sequence[Curve]) -> list[str]:
+    """The fitted curve should pass through its points to 5 % (common practice)."""
+    worst, at = 0.0, 0.0
+    for c in msd:
+        for lag, value, model, used in zip(c.lag_s, c.value, c.model, c.fitted, strict=True):
+            if used and model > 0 and abs(np.log(value / model)) > abs(worst):
+                worst, at = float(np.log(value / model)), lag
+    if abs(worst) < 0.05:
+        return []
+    return [
+        f"The mean squared displacement departs from the fitted curve by {abs(worst):.0%} at a lag "
+        f"of {at:.3g} s: the motion is not that of the active model (pauses, circling, or several "
+        "populations), or there are too few tracks. Look at the tracks before quoting D_r."
+    ]
+
+
+def _headings_disagree(
+    estimates: Mapping[str, Estimate], combined: Combined, columns: Mapping[str, int]
+) -> list[str]:
+    from_msd = estimates["rotational_diffusion_rad2_s"].value
+    from_heading = combined.value[columns["heading_diffusion"]]
+    if not (from_msd > 0 and from_heading > 0):
+        return []
+    ratio = float(from_heading / from_msd)
+    difference = (
+        combined.draws[:, columns["heading_diffusion"]]
+        - combined.draws[:, columns["rotational_diffusion"]]
+    )
+    # Without replicates nothing says how sure the difference is; then only a gross one counts.
+    error = float(difference.std()) if np.isfinite(difference).all() else 0.0
+    sure = abs(from_heading - from_msd) > 3 * error
+    if not (sure and not 1 / 1.5 < ratio < 1.5):
+        return []
+    return [
+        f"The heading correlation gives a rotational diffusion {ratio:.2g} times that of the mean "
+        "squared displacement. Sideways motion, circling or a mixture of filaments can do that; "
+        "do not quote D_r without looking at the tracks."
+    ]
+
+
+def methods(
+    *,
+    recordings: Sequence[CleanRecording],
+    counted: Counts,
+    longest_lag_s: float,
+    generalises: str,
+    level: float,
+    resamples: int,
+    version: str,
+) -> str:
+    """A methods paragraph to quote."""
+    rates = sorted({f"{r.frame_s:.4g}" for r in recordings})
+    aside = ", ".join(f"{n} {name}" for name, n in counted.set_aside.items() if n) or "none"
+    return (
+        f"Tracks of {counted.recordings} recordings ({counted.chambers} chambers, {counted.days} "
+        f"days; frame interval {' and '.join(rates)} s) were analysed with glidefit {version}. "
+        f"Of {counted.tracks_seen} tracks {counted.tracks_kept} were kept; set aside: {aside}. "
+        "Speed v and rotational diffusion D_r are those of the active Brownian model in two dimensions, "
+        "with diffusion along the heading, localization error and motion blur, fitted on the "
+        "logarithmic scale to the mean squared displacement of each chamber up to a lag of "
+        f"{longest_lag_s:.3g} s; pairs of positions were weighted for the edges of the field. "
+        "Persistence length is v/D_r (decay of the heading correlation along the path), path "
+        "persistence length v/(2 D_r) (worm-like chain in two dimensions). Chamber values were "
+        "averaged within days and days within the condition. Intervals at the "
+        f"{level:.0%} level come from {resamples} resamples of whole units of the highest level "
+        f"that repeats, with Student's t for its degrees of freedom. {generalises}"
+    )
+
+
+def condition_result(
+    *,
+    condition: str,
+    slug: str,
+    control: bool,
+    recordings: Sequence[CleanRecording],
+    level: float,
+    problem: str,
+) -> ConditionResult:
+    """A condition of which nothing was left to fit."""
+    drawn_tracks = drawn(recordings, most=100)
+    return ConditionResult(
+        condition=condition,
+        slug=slug,
+        control=control,
+        model="none",
+        counts=counts(recordings),
+        estimates=all_estimates({}, level=level),
+        problems=(problem,),
+        msd=(),
+        heading_correlation=(),
+        chambers=chambers(recordings, {}),
+        tracks=tracks(recordings, {}),
+        drawn=drawn_tracks,
+        time_points=(),
+        spread=(),
+        generalises="Nothing was left to fit.",
+        longest_lag_s=NAN,
+        heading_diffusion_rad2_s=NAN,
+        methods="Nothing was left to fit.",
+    )
