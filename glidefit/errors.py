@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from functools import partial
+from typing import Any
 
 
 class GlidefitError(Exception):
@@ -32,8 +34,13 @@ class InputError(GlidefitError):
         self.where, self.found, self.expected, self.remedy = where, found, expected, remedy
         super().__init__(f"{where}: {found}; expected {expected}. {remedy}")
 
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Rebuild from its parts, as when a worker process hands it back."""
+        again = partial(InputError, expected=self.expected, remedy=self.remedy)
+        return again, (self.where, self.found)
 
-class InputErrors(GlidefitError):
+
+class InputErrors(GlidefitError):  # noqa: N818
     """All that is wrong with the input, listed at once."""
 
     exit_code = 3
@@ -41,6 +48,10 @@ class InputErrors(GlidefitError):
     def __init__(self, errors: Iterable[InputError]) -> None:
         self.errors = tuple(errors)
         super().__init__("\n".join(str(error) for error in self.errors))
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Rebuild from its parts, as when a worker process hands it back."""
+        return InputErrors, (self.errors,)
 
 
 class NothingLeft(GlidefitError):  # noqa: N818  (the state is the name a user knows)

@@ -56,7 +56,7 @@ class CleanTracks:
     @property
     def kept(self) -> Bools:
         """True for tracks that enter the fit, (m,)."""
-        return self.reason == KEPT
+        return np.asarray(self.reason == KEPT)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

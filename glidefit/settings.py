@@ -5,7 +5,7 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any, Literal, get_args, get_origin
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
@@ -84,7 +84,7 @@ class FitSettings(_Section):
     """How the active-Brownian model is fitted."""
 
     bend: float = setting(
-        0.2,
+        0.15,
         "rad²",
         "The longest lag is the one over which D_r t reaches this, as far as the data allow.",
         gt=0,
@@ -170,18 +170,19 @@ def declarations() -> Iterator[Declaration]:
     """All settings in the order of their declaration."""
     for section, holder in Settings.model_fields.items():
         kind = holder.annotation
-        assert isinstance(kind, type) and issubclass(kind, BaseModel)
+        assert isinstance(kind, type)
+        assert issubclass(kind, BaseModel)
         for name, field in kind.model_fields.items():
             yield _declaration(section, name, field)
 
 
 def _declaration(section: str, name: str, field: Any) -> Declaration:
     choices: tuple[str, ...] = ()
-    kind = field.annotation
-    if getattr(kind, "__origin__", None) is Literal:
-        kind, choices = str, kind.__args__
+    kind: Any = field.annotation
+    if get_origin(kind) is Literal:
+        kind, choices = str, get_args(kind)
     elif not isinstance(kind, type):  # float | None
-        kind = next(k for k in kind.__args__ if k is not type(None))
+        kind = next(k for k in get_args(kind) if k is not type(None))
     return Declaration(
         section=section,
         name=name,

@@ -164,3 +164,58 @@ class Tracks:
             heading_rad=column("heading_rad") if "heading_rad" in table else None,
             length_um=column("length_um") if "length_um" in table else None,
         )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Detections:
+    """Spots of one recording before they are joined into tracks, sorted by frame.
+
+    Parameters
+    ----------
+    frame : (n,) array of int
+        From 0, not decreasing.
+    x_um, y_um : (n,) arrays
+        Positions in µm; x to the right, y down.
+    brightness : (n,) array
+        Light of the spot above its background, in counts.
+    precision_um : (n,) array
+        Standard deviation of each coordinate in µm, as the noise of the frame gives it, > 0.
+    n_frames : int
+        Frames looked at, with and without spots.
+    noise : (n_frames,) array
+        Standard deviation of a pixel of empty background, in counts.
+    background : (n_frames,) array
+        Median of each frame, in counts.
+    """
+
+    frame: Ints
+    x_um: Floats
+    y_um: Floats
+    brightness: Floats
+    precision_um: Floats
+    n_frames: int
+    noise: Floats
+    background: Floats
+
+    def __post_init__(self) -> None:
+        n = len(self.frame)
+        for name in ("x_um", "y_um", "brightness", "precision_um"):
+            column = getattr(self, name)
+            if len(column) != n:
+                raise ValueError(f"{name} has {len(column)} rows, frame has {n}")
+            if not np.all(np.isfinite(column)):
+                raise ValueError(f"{name} holds a value that is not finite")
+        if np.any(self.precision_um <= 0):
+            raise ValueError("precision_um must be > 0")
+        if n and (self.frame[0] < 0 or self.frame[-1] >= self.n_frames):
+            raise ValueError(f"frame is outside 0 to {self.n_frames - 1}")
+        if np.any(np.diff(self.frame) < 0):
+            raise ValueError("frame decreases")
+        for name in ("noise", "background"):
+            if len(getattr(self, name)) != self.n_frames:
+                raise ValueError(f"{name} needs one value for each of {self.n_frames} frames")
+
+    @property
+    def offsets(self) -> Ints:
+        """Frame f owns the rows ``offsets[f]:offsets[f + 1]``, (n_frames + 1,)."""
+        return np.searchsorted(self.frame, np.arange(self.n_frames + 1)).astype(np.int64)

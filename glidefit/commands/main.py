@@ -77,6 +77,23 @@ def main() -> None:
     except GlidefitError as error:
         click.echo(_told(str(error)), err=True)
         sys.exit(error.exit_code)
+    except Exception as error:  # noqa: BLE001  (the last resort: a fault of ours is told plainly)
+        click.echo(_own_fault(error), err=True)
+        sys.exit(1)
+
+
+def _own_fault(error: Exception) -> str:
+    import tempfile
+    import traceback
+
+    with tempfile.NamedTemporaryFile(
+        "w", prefix="glidefit-fault-", suffix=".txt", delete=False, encoding="utf-8"
+    ) as file:
+        file.write("".join(traceback.format_exception(error)))
+    return (
+        f"Error: glidefit met a fault of its own ({type(error).__name__}: {error}). Earlier output "
+        f"is unchanged. Please report it with {file.name}, which says where it happened."
+    )
 
 
 def _told(text: str) -> str:

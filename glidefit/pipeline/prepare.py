@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import NDArray
 
 from glidefit.assay import Recording
 from glidefit.errors import InputError
@@ -12,7 +14,12 @@ from glidefit.evidence import REASONS, CleanRecording
 from glidefit.results import RecordingResult
 from glidefit.running.checksums import sha256
 from glidefit.settings import Settings
-from glidefit.tracks import Tracks
+from glidefit.tracks import Detections, Tracks
+
+if TYPE_CHECKING:
+    from glidefit.reading.video import VideoFacts
+
+Floats = NDArray[np.float64]
 
 # The sheet and the file may differ by this share before it is a contradiction.
 _AGREE = 0.01
@@ -166,12 +173,38 @@ def _frame_range(tracks: Tracks, recording: Recording) -> Tracks:
     return Tracks.from_frame(table)
 
 
-def _from_video(task: Task) -> Tracked:
-    from glidefit.reading.video import read_facts, read_frames
-    from glidefit.steps.detect import detect_spots
-    from glidefit.steps.link import link
+@dataclass(frozen=True, slots=True, kw_only=True)
+class OpenVideo:
+    """A video whose calibration is settled."""
 
-    recording, settings = task.recording, task.settings
+    facts: VideoFacts
+    first: int
+    last: int
+    pixel_um: float
+    pixel_source: str
+    frame_s: float
+    frame_source: str
+    exposure_s: float
+    exposure_source: str
+
+    def times(self, n_frames: int) -> Floats:
+        """Start of the first frames after the first one; real times where the file has them."""
+        if self.facts.times_s is None:
+            return np.arange(n_frames, dtype=np.float64) * self.frame_s
+        times = self.facts.times_s[self.first : self.first + n_frames]
+        return np.asarray(times - times[0])
+
+
+def open_video(recording: Recording) -> OpenVideo:
+    """Settle calibration and range of frames of a spot video, without reading its frames.
+
+    Raises
+    ------
+    InputError
+        For a filament video, a contradiction between sheet and file, or a missing calibration.
+    """
+    from glidefit.reading.video import read_facts
+
     where = f"{recording.where}, {recording.name}"
     if recording.shape == "filament":
         raise InputError(
@@ -198,14 +231,45 @@ def _from_video(task: Task) -> Tracked:
             expected="at least three frames inside the video",
             remedy="Correct first_frame and last_frame.",
         )
+    return OpenVideo(
+        facts=facts,
+        first=first,
+        last=last,
+        pixel_um=pixel_um,
+        pixel_source=pixel_source,
+        frame_s=frame_s,
+        frame_source=frame_source,
+        exposure_s=exposure,
+        exposure_source=exposure_source,
+    )
+
+
+def detect(
+    recording: Recording, video: OpenVideo, *, settings: Settings, most_frames: int | None = None
+) -> Detections:
+    """Spots of a video, or of its first frames."""
+    from glidefit.reading.video import read_frames
+    from glidefit.steps.detect import detect_spots
+
+    last = video.last if most_frames is None else min(video.last, video.first + most_frames - 1)
     frames = read_frames(
         recording.path,
-        first=first,
+        first=video.first,
         last=last,
         channel=recording.channel,
         position=recording.position,
     )
-    detections = detect_spots(frames, pixel_um=pixel_um, settings=settings.detect, where=where)
+    where = f"{recording.where}, {recording.name}"
+    return detect_spots(frames, pixel_um=video.pixel_um, settings=settings.detect, where=where)
+
+
+def _from_video(task: Task) -> Tracked:
+    from glidefit.steps.link import link
+
+    recording, settings = task.recording, task.settings
+    where = f"{recording.where}, {recording.name}"
+    video = open_video(recording)
+    detections = detect(recording, video, settings=settings)
     if len(detections.frame) == 0:
         raise InputError(
             where,
@@ -213,21 +277,20 @@ def _from_video(task: Task) -> Tracked:
             expected=f"spots above {settings.detect.threshold:g} × noise",
             remedy="Look at the video; lower detect.threshold or correct detect.spot_diameter.",
         )
-    times = np.arange(detections.n_frames) * frame_s
-    if facts.times_s is not None:
-        times = facts.times_s[first : last + 1] - facts.times_s[first]
+    times = video.times(detections.n_frames)
     tracks, notes = link(detections, times_s=times, settings=settings.link, where=where)
+    facts = video.facts
     return Tracked(
         tracks=tracks,
         kind="video",
         n_frames=detections.n_frames,
-        frame_s=frame_s,
-        frame_s_source=frame_source,
-        pixel_um=pixel_um,
-        pixel_um_source=pixel_source,
-        exposure_s=exposure,
-        exposure_source=exposure_source,
-        field_um=(facts.width_px * pixel_um, facts.height_px * pixel_um),
+        frame_s=video.frame_s,
+        frame_s_source=video.frame_source,
+        pixel_um=video.pixel_um,
+        pixel_um_source=video.pixel_source,
+        exposure_s=video.exposure_s,
+        exposure_source=video.exposure_source,
+        field_um=(facts.width_px * video.pixel_um, facts.height_px * video.pixel_um),
         notes=(*facts.notes, *notes),
     )
 

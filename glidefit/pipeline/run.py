@@ -98,7 +98,8 @@ def read_assay(sheets: Sequence[Path]) -> Assay:
     """
     from glidefit.reading.sheet import read_sheet
 
-    assays, errors = [], []
+    assays: list[Assay] = []
+    errors: list[InputError] = []
     for sheet in sheets:
         try:
             assays.append(read_sheet(sheet))

@@ -6,7 +6,7 @@ import json
 import os
 import shutil
 import tempfile
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from pathlib import Path
 
@@ -16,8 +16,23 @@ MARK = "results.json"
 _FORMAT_PREFIX = "glidefit-"
 
 
-def check_output(folder: Path) -> None:
+def is_report(folder: Path) -> bool:
+    """True for a folder that an earlier run wrote."""
+    try:
+        data = json.loads((folder / MARK).read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        return False
+    return isinstance(data, dict) and str(data.get("format", "")).startswith(_FORMAT_PREFIX)
+
+
+def check_output(folder: Path, *, holds: Callable[[Path], bool] = is_report) -> None:
     """Refuse a folder that a run may not replace, before any work is done.
+
+    Parameters
+    ----------
+    folder : Path
+    holds : callable
+        Tells of a folder that is not empty whether an earlier output may be replaced.
 
     Raises
     ------
@@ -28,10 +43,10 @@ def check_output(folder: Path) -> None:
         raise OutputError(
             f"{folder}: this is a file; expected a folder for the pages. Choose another --out."
         )
-    if folder.is_dir() and any(folder.iterdir()) and not _is_report(folder):
+    if folder.is_dir() and any(folder.iterdir()) and not holds(folder):
         raise OutputError(
-            f"{folder}: the folder is not empty and holds no earlier report of glidefit; nothing "
-            "was changed. Choose another --out, or empty the folder yourself."
+            f"{folder}: the folder is not empty and holds no earlier output of this command of "
+            "glidefit; nothing was changed. Choose another --out, or empty the folder yourself."
         )
     parent = next(p for p in folder.absolute().parents if p.exists())
     if not os.access(parent, os.W_OK | os.X_OK) or not parent.is_dir():
@@ -41,16 +56,8 @@ def check_output(folder: Path) -> None:
         )
 
 
-def _is_report(folder: Path) -> bool:
-    try:
-        data = json.loads((folder / MARK).read_text(encoding="utf-8"))
-    except (OSError, ValueError):
-        return False
-    return isinstance(data, dict) and str(data.get("format", "")).startswith(_FORMAT_PREFIX)
-
-
 @contextmanager
-def replaced(folder: Path) -> Iterator[Path]:
+def replaced(folder: Path, *, holds: Callable[[Path], bool] = is_report) -> Iterator[Path]:
     """A temporary sibling to write into; it takes the folder's place when the block ends well.
 
     Raises
@@ -58,7 +65,7 @@ def replaced(folder: Path) -> Iterator[Path]:
     OutputError
         As `check_output`, or if writing fails; the previous report then stays whole.
     """
-    check_output(folder)
+    check_output(folder, holds=holds)
     try:
         folder.absolute().parent.mkdir(parents=True, exist_ok=True)
         fresh = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=folder.absolute().parent))

@@ -67,7 +67,7 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     gliding = (reason == KEPT) & (measured.lag > 0)
     typical = _median(measured.speed_um_frame[gliding]) / frame_s
     noticed = motion.smallest_noticed_speed(
-        tracks.n_positions, duration, noise=noise, multiple=settings.stuck
+        tracks.n_positions.astype(np.float64), duration, noise=noise, multiple=settings.stuck
     )
     undecided = (reason == STUCK) & (noticed > _UNNOTICED_SHARE * typical)
     reason = np.where(undecided, KEPT, reason)
@@ -99,7 +99,8 @@ def _noise(tracks: Tracks, where: str) -> float:
 
 def _duration(tracks: Tracks, frame_s: float) -> Floats:
     first, last = tracks.offsets[:-1], tracks.offsets[1:] - 1
-    return np.maximum(tracks.frame[last] - tracks.frame[first], 1) * frame_s
+    frames = np.maximum(tracks.frame[last] - tracks.frame[first], 1)
+    return np.asarray(frames * frame_s, dtype=np.float64)
 
 
 def _median(values: Floats) -> float:

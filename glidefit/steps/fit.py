@@ -160,10 +160,9 @@ class _Kept:
         time = np.diff(t.time_s)
         inside = np.diff(t.index) == 0
         owner = t.index[1:][inside]
-        return (
-            np.bincount(owner, weights=step[inside], minlength=t.n_tracks),
-            np.bincount(owner, weights=time[inside], minlength=t.n_tracks),
-        )
+        path = np.bincount(owner, weights=step[inside], minlength=t.n_tracks)
+        spent = np.bincount(owner, weights=time[inside], minlength=t.n_tracks)
+        return path.astype(np.float64), spent.astype(np.float64)
 
     def track_speed(self, longest: float, values: Floats) -> Floats:
         """Speed of each track from one lag, noise and bend removed; NaN if it is too short."""
@@ -260,8 +259,8 @@ def _intervals(kept: list[_Kept]) -> list[_Interval]:
         else:
             groups.append([one])
     intervals = [_Interval(group) for group in groups]
-    for index, group in enumerate(intervals):
-        for one in group.members:
+    for index, interval in enumerate(intervals):
+        for one in interval.members:
             one.index = index
     return intervals
 
@@ -292,7 +291,7 @@ def _curve_columns(groups: list[_Interval], longest: float) -> tuple[CurveColumn
 
     for group in groups:
         n, k = len(group.lag_s), len(group.heading_lags)
-        heading_lag = group.heading_lags * group.frame_s
+        heading_lag = group.heading_lags.astype(np.float64) * group.frame_s
         columns.append(
             CurveColumns(
                 frame_s=group.frame_s,

@@ -1,0 +1,36 @@
+"""glidefit sheet."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+
+@click.command("sheet")
+@click.argument("folder", type=click.Path(path_type=Path), metavar="FOLDER")
+@click.option(
+    "--names",
+    metavar="PATTERN",
+    help="How names are to be read, such as {day}/{condition}_ch{chamber}_{field}; * is any text.",
+)
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Where to write the sheet.  (default: assay.csv in FOLDER)",
+)
+def command(folder: Path, names: str | None, out: Path | None) -> None:
+    """Draft an assay sheet from a folder of recordings.
+
+    Calibration is filled in where the files tell it, days and conditions where the names do. An
+    existing file is never overwritten.
+    """
+    from glidefit.pipeline.draft import draft
+
+    path, rows = draft(folder, names=names, out=out)
+    empty = sorted(
+        {name for row in rows for name in ("condition", "day", "chamber") if not row[name]}
+    )
+    rest = f" Fill in {', '.join(empty)}." if empty else ""
+    click.echo(f"{path}: {len(rows)} recordings.{rest} Then run `glidefit check {path}`.")

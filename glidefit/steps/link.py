@@ -1,0 +1,249 @@
+"""Linking: detections of successive frames joined into tracks."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from glidefit.errors import InputError
+from glidefit.kernels.matching import (
+    MotionLaw,
+    Spots,
+    TrackStates,
+    best_links,
+    born,
+    clear_steps,
+    continued,
+    link_gain,
+    predicted,
+    reachable,
+    speed_mixture,
+    turning_and_wobble,
+)
+from glidefit.settings import LinkSettings
+from glidefit.tracks import Detections, Tracks
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+# How spots move is learned from so many frames.
+_LEARNING_FRAMES = 400
+# Spots in one group of competing links from which on a frame is called crowded.
+_CROWD = 30
+_FEWEST_STEPS = 30
+
+
+def link(
+    detections: Detections, *, times_s: Floats, settings: LinkSettings, where: str
+) -> tuple[Tracks, tuple[str, ...]]:
+    """Tracks of the spots of a recording, and notes on what may be wrong with them.
+
+    A spot continues a track if that is likelier than that the track is missed and another begins:
+    the likelihood is that of its distance from where the track, which has a velocity, was going.
+    How fast spots are and how sharply they turn is learned from the recording. No link is faster
+    than `settings.max_speed` since the track was last seen, but for the noise of both positions;
+    a track is bridged over `settings.max_gap` frames. All links of a frame are chosen together.
+
+    Parameters
+    ----------
+    detections : Detections
+        n positions in f frames.
+    times_s : (f,) array
+        Start of each frame in s, increasing.
+    settings : LinkSettings
+        Largest speed and gap.
+    where : str
+        The recording, for messages.
+
+    Returns
+    -------
+    Tracks
+        Every position is in one track, however short; numbered by their first frames from "1".
+    tuple of str
+        Sentences for the page, none if nothing is wrong.
+
+    Raises
+    ------
+    InputError
+        For times that do not increase.
+    """
+    _check(times_s, detections.n_frames, where)
+    spots = _spots(detections, times_s)
+    seen = spots[:_LEARNING_FRAMES]
+    law = _first_law(seen, settings)
+    for _ in range(2):
+        law = _learned(law, seen, _linked(seen, law, settings)[0], settings)
+    track, crowds = _linked(spots, law, settings)
+    notes = (*_crowd_notes(crowds), *_speed_notes(spots, law, settings, times_s))
+    return _tracks(detections, times_s, track), notes
+
+
+def _check(times_s: Floats, n_frames: int, where: str) -> None:
+    if len(times_s) != n_frames:
+        raise ValueError(f"{len(times_s)} times for {n_frames} frames")
+    late = np.flatnonzero(~(np.diff(times_s) > 0))
+    if len(late):
+        k = int(late[0])
+        raise InputError(
+            f"{where}, frame {k + 1}",
+            f"its time is {times_s[k + 1]:g} s, after {times_s[k]:g} s of the frame before",
+            expected="times in s that increase from frame to frame",
+            remedy="Give frame_s in the assay sheet if the times of the file are wrong.",
+        )
+
+
+def _spots(detections: Detections, times_s: Floats) -> list[Spots]:
+    cuts = detections.offsets
+    return [
+        Spots(
+            f,
+            float(times_s[f]),
+            detections.x_um[a:b],
+            detections.y_um[a:b],
+            detections.precision_um[a:b],
+        )
+        for f, (a, b) in enumerate(zip(cuts[:-1], cuts[1:], strict=True))
+    ]
+
+
+def _linked(
+    spots: Sequence[Spots], law: MotionLaw, settings: LinkSettings
+) -> tuple[Ints, Ints]:
+    """Track of each position (n,), and the largest crowd of each frame (f,)."""
+    longest_s = 1.5 * (settings.max_gap + 1) * _usual_interval(spots)
+    states = TrackStates.none()
+    tracks: list[Ints] = []
+    crowds, n_tracks = [], 0
+    for here in spots:
+        alive = states.frame >= here.frame - 1 - settings.max_gap
+        states = states.select(alive & (here.time_s - states.time_s <= longest_s))
+        ahead = predicted(states, time_s=here.time_s, law=law)
+        i, j = reachable(states, here, max_speed=settings.max_speed)
+        gain = link_gain(ahead, i, here, j, law=law)
+        best, crowd = best_links(i, j, gain, n_tracks=len(states.track), n_spots=len(here.x))
+        i, j = i[best], j[best]
+        new = np.setdiff1d(np.arange(len(here.x)), j)
+        track = np.empty(len(here.x), dtype=np.int64)
+        track[j] = states.track[i]
+        track[new] = n_tracks + np.arange(len(new))
+        going = continued(ahead, i, here, j, law=law)
+        begun = born(here, new, first_track=n_tracks, law=law)
+        states = states.select(~np.isin(states.track, going.track)).joined(going).joined(begun)
+        n_tracks += len(new)
+        tracks.append(track)
+        crowds.append(crowd)
+    return np.concatenate([np.empty(0, dtype=np.int64), *tracks]), np.array(crowds, dtype=np.int64)
+
+
+def _usual_interval(spots: Sequence[Spots]) -> float:
+    times = [here.time_s for here in spots]
+    return float(np.median(np.diff(times))) if len(times) > 1 else 1.0
+
+
+def _area(spots: Sequence[Spots]) -> float:
+    """Area of the field that has spots, µm²."""
+    x, y = (np.concatenate([getattr(s, name) for s in spots]) for name in ("x", "y"))
+    return max(float(np.ptp(x) * np.ptp(y)), 1.0) if len(x) else 1.0
+
+
+def _first_law(spots: Sequence[Spots], settings: LinkSettings) -> MotionLaw:
+    """From the steps that cannot be mistaken."""
+    density = sum(len(s.x) for s in spots) / (_area(spots) * max(len(spots), 1))
+    steps: list[Floats] = [np.empty((3, 0))]
+    for before, after in zip(spots[:-1], spots[1:], strict=True):
+        i, j = clear_steps(before, after, max_speed=settings.max_speed)
+        square = (after.x[j] - before.x[i]) ** 2 + (after.y[j] - before.y[i]) ** 2
+        noise = before.precision[i] ** 2 + after.precision[j] ** 2
+        steps.append(np.stack([square, np.full(len(i), after.time_s - before.time_s), noise]))
+    slow, fast, share = _speeds(np.concatenate(steps, axis=1), settings)
+    return MotionLaw(
+        slow_um_s=slow,
+        fast_um_s=fast,
+        fast_share=share,
+        turning=1.0,
+        wobble_um=0.0,
+        missed=0.05,
+        births=max(0.05 * density, 1e-9),
+    )
+
+
+def _speeds(steps: Floats, settings: LinkSettings) -> tuple[float, float, float]:
+    if steps.shape[1] < _FEWEST_STEPS:  # too few to learn from: anything up to the largest speed
+        return settings.max_speed / 30, settings.max_speed / 3, 0.5
+    slow, fast, share = speed_mixture(*steps, max_speed=settings.max_speed)
+    return slow, fast, float(np.clip(share, 0.05, 0.95))
+
+
+def _learned(
+    law: MotionLaw, spots: Sequence[Spots], track: Ints, settings: LinkSettings
+) -> MotionLaw:
+    """From the tracks that the law before has given."""
+    x, y, precision = (
+        np.concatenate([np.empty(0), *(getattr(s, name) for s in spots)])
+        for name in ("x", "y", "precision")
+    )
+    counts = [len(s.x) for s in spots]
+    frame = np.repeat(np.arange(len(spots)), counts)
+    time_s = np.repeat([s.time_s for s in spots], counts)
+    order = np.lexsort((frame, track))
+    x, y, precision, frame, time_s, track = (
+        a[order] for a in (x, y, precision, frame, time_s, track)
+    )
+    inside = np.diff(track) == 0
+    noise = precision[1:] ** 2 + precision[:-1] ** 2 + 2 * law.wobble_um**2
+    steps = np.stack([np.diff(x) ** 2 + np.diff(y) ** 2, np.diff(time_s), noise])[:, inside]
+    slow, fast, share = _speeds(steps, settings)
+    runs = np.arange(max(len(x) - 4, 0))[:, None] + np.arange(5)
+    runs = runs[(track[runs[:, 4]] == track[runs[:, 0]]) & (frame[runs[:, 4]] == frame[runs[:, 0]] + 4)]
+    turning, wobble = turning_and_wobble(x[runs], y[runs], time_s[runs], precision[runs])
+    begun = int(np.sum(frame[np.flatnonzero(np.diff(track, prepend=-1))] > 0))
+    lost = int(np.sum(np.diff(frame)[inside] - 1))
+    seen = max(len(x), 1)
+    density = seen / (_area(spots) * max(len(spots), 1))
+    births = (begun + 1) / (_area(spots) * max(len(spots), 1))
+    return dataclasses.replace(
+        law,
+        slow_um_s=slow,
+        fast_um_s=fast,
+        fast_share=share,
+        turning=law.turning if turning is None else float(np.clip(turning, 0.02, 5.0)),
+        wobble_um=law.wobble_um if wobble is None else wobble,
+        missed=float(np.clip((lost + begun) / (seen + lost), 0.01, 0.3)),
+        births=float(np.clip(births, 2e-3 * density, density)),
+    )
+
+
+def _crowd_notes(crowds: Ints) -> tuple[str, ...]:
+    crowded = np.flatnonzero(crowds > _CROWD)
+    if len(crowded) == 0:
+        return ()
+    worst = int(np.argmax(crowds))
+    more = f" (and in {len(crowded) - 1} other frames)" if len(crowded) > 1 else ""
+    return (
+        f"In frame {worst}{more} {crowds[worst]} spots lie so close that their links compete, and "
+        "some of the tracks may go on with another spot. A higher detect.threshold finds fewer "
+        "faint spots; a lower link.max_speed has fewer links to choose from.",
+    )
+
+
+def _speed_notes(
+    spots: Sequence[Spots], law: MotionLaw, settings: LinkSettings, times_s: Floats
+) -> tuple[str, ...]:
+    return ()
+
+
+def _tracks(detections: Detections, times_s: Floats, track: Ints) -> Tracks:
+    order = np.lexsort((detections.frame, track))
+    counts = np.bincount(track)
+    frame = detections.frame[order]
+    return Tracks(
+        label=np.array([str(k + 1) for k in range(len(counts))], dtype=np.str_),
+        offsets=np.concatenate([[0], np.cumsum(counts)]).astype(np.int64),
+        frame=frame,
+        time_s=times_s[frame],
+        x_um=detections.x_um[order],
+        y_um=detections.y_um[order],
+    )

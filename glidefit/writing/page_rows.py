@@ -1,0 +1,241 @@
+"""The rows of the tables of a page: records of results turned into text."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+from glidefit.quantities import QUANTITIES, Quantity
+from glidefit.results import (
+    Comparison,
+    ConditionResult,
+    Drift,
+    Estimate,
+    LevelSpread,
+    RecordingResult,
+    SettingRow,
+)
+from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
+from glidefit.writing.wording import counted, joined, named, visible
+
+MAIN = (
+    "speed_um_s",
+    "rotational_diffusion_rad2_s",
+    "persistence_length_um",
+    "path_persistence_length_um",
+    "motile_fraction",
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class EstimateRow:
+    """One estimate as a reader sees it."""
+
+    quantity: Quantity
+    shown: Rounded
+    interval: str  # "95 % interval: 0.77 to 0.83, over days"
+    problem: str
+    absent: bool  # the problem says why there is no value
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RecordingRow:
+    """One recording: its calibration and what was measured on it."""
+
+    recording: str
+    kind: str
+    place: str
+    calibration: tuple[str, ...]
+    noise: str
+    smallest_speed: str
+    drift: str
+    tracks: str
+    set_aside: str
+    problems: tuple[str, ...]
+    sha256: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SpreadRow:
+    """How much one level brings to the uncertainty of one quantity."""
+
+    level: str
+    units: str
+    error: str
+    bar: int  # percent of the widest bar
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ComparisonRow:
+    """One comparison as a reader sees it."""
+
+    condition: str
+    reference: str
+    quantity: str
+    ratio: Rounded
+    level: str
+    p_value: str
+    p_adjusted: str
+    p_permutation: str
+    problem: str
+
+
+def main_estimates(condition: ConditionResult) -> tuple[EstimateRow, ...]:
+    """The five numbers a reader looks for."""
+    return tuple(_estimate(key, condition.estimates[key]) for key in MAIN)
+
+
+def other_estimates(condition: ConditionResult) -> tuple[EstimateRow, ...]:
+    """All other quantities, in the order of their declaration."""
+    return tuple(_estimate(key, condition.estimates[key]) for key in QUANTITIES if key not in MAIN)
+
+
+def _estimate(key: str, estimate: Estimate) -> EstimateRow:
+    shown = rounded(estimate.value, estimate.low, estimate.high)
+    interval = shown.interval
+    if math.isfinite(estimate.low) or math.isfinite(estimate.high):
+        interval = f"{percent(estimate.level)} interval: {interval}"
+        if estimate.covers:
+            interval += f", over {visible(estimate.covers)}"
+    return EstimateRow(
+        quantity=QUANTITIES[key],
+        shown=shown,
+        interval=interval,
+        problem=estimate.problem,
+        absent=shown.value == NONE,
+    )
+
+
+def recording_rows(
+    recordings: Iterable[RecordingResult], settings: Sequence[SettingRow]
+) -> tuple[RecordingRow, ...]:
+    """One row a recording."""
+    return tuple(
+        RecordingRow(
+            recording=named(r.recording),
+            kind=f"{r.kind} of {r.shape}s, {counted(r.n_frames, 'frame')}",
+            place=f"{named(r.day)}, chamber {named(r.chamber)}",
+            calibration=_calibration(r, settings),
+            noise=_with_unit(r.localization_error_um, "µm"),
+            smallest_speed=_with_unit(r.smallest_speed_um_s, "µm/s"),
+            drift=_drift(r.drift),
+            tracks=f"{r.tracks_kept:,} of {counted(r.tracks_seen, 'track')} kept",
+            set_aside=", ".join(f"{visible(why)} {n:,}" for why, n in r.set_aside.items() if n),
+            problems=r.problems,
+            sha256=r.sha256,
+        )
+        for r in recordings
+    )
+
+
+def shared_calibration(rows: Sequence[RecordingRow]) -> tuple[str, ...]:
+    """The calibration of all recordings if it is one and the same, else nothing."""
+    distinct = {row.calibration for row in rows}
+    return rows[0].calibration if len(rows) > 1 and len(distinct) == 1 else ()
+
+
+def _calibration(recording: RecordingResult, settings: Sequence[SettingRow]) -> tuple[str, ...]:
+    r = recording
+    pixel = "positions in µm"
+    if math.isfinite(r.pixel_um):
+        pixel = f"pixel {r.pixel_um:g} µm{_source(r.pixel_um_source)}"
+    frame = f"frame interval {r.frame_s:g} s{_source(r.frame_s_source)}"
+    width, height = r.field_um
+    field = "field unknown"
+    if width > 0 and height > 0:
+        field = f"field {significant(width)} × {significant(height)} µm"
+    return pixel, frame, _exposure(r, settings), field
+
+
+def _exposure(recording: RecordingResult, settings: Sequence[SettingRow]) -> str:
+    if math.isfinite(recording.exposure_s):
+        return f"exposure {recording.exposure_s:g} s{_source(recording.exposure_source)}"
+    share = next((row.value for row in settings if row.key == "fit.unknown_exposure"), "")
+    try:
+        assumed = float(share) * recording.frame_s
+    except ValueError:
+        return "exposure unknown"
+    return f"exposure unknown, assumed {assumed:g} s"
+
+
+def _source(source: str) -> str:
+    return f" ({visible(source)})" if source else ""
+
+
+def _with_unit(value: float, unit: str) -> str:
+    return f"{significant(value)} {unit}" if math.isfinite(value) else NONE
+
+
+def _drift(drift: Drift) -> str:
+    note = visible(drift.note)
+    if not drift.measured:
+        return note if note.startswith("not measured") else f"not measured: {note}".rstrip(": ")
+    speed = significant(drift.speed_um_s, digits=2)
+    far = significant(drift.largest_um, digits=2)
+    objects = counted(drift.n_objects, "stuck object")
+    done = note or ("subtracted" if drift.subtracted else "not subtracted")
+    return f"{speed} µm/s, up to {far} µm, from {objects}; {done}"
+
+
+def spread_tables(
+    spread: Iterable[LevelSpread],
+) -> tuple[tuple[str, tuple[SpreadRow, ...], str], ...]:
+    """For each quantity its label, a row a level, and the level that brings most."""
+    by_quantity: dict[str, list[LevelSpread]] = {}
+    for item in spread:
+        if math.isfinite(item.relative_error):
+            by_quantity.setdefault(item.quantity, []).append(item)
+    tables = []
+    for key, items in by_quantity.items():
+        label = QUANTITIES[key].label if key in QUANTITIES else visible(key)
+        widest = max(items, key=lambda item: item.relative_error)
+        rows = tuple(_spread(item, widest.relative_error) for item in items)
+        advice = f"Most comes from {visible(widest.level)}."
+        tables.append((label, rows, advice if widest.relative_error > 0 else ""))
+    return tuple(tables)
+
+
+def _spread(item: LevelSpread, widest: float) -> SpreadRow:
+    bar = round(100 * item.relative_error / widest) if widest > 0 else 0
+    return SpreadRow(
+        level=visible(item.level),
+        units=f"{item.units:,}",
+        error=percent(item.relative_error),
+        bar=bar,
+    )
+
+
+def comparison_rows(comparisons: Iterable[Comparison]) -> tuple[ComparisonRow, ...]:
+    """One row a comparison."""
+    return tuple(
+        ComparisonRow(
+            condition=named(c.condition),
+            reference=named(c.reference),
+            quantity=QUANTITIES[c.quantity].label if c.quantity in QUANTITIES else c.quantity,
+            ratio=rounded(c.ratio.value, c.ratio.low, c.ratio.high),
+            level=percent(c.ratio.level),
+            p_value=probability(c.p_value),
+            p_adjusted=probability(c.p_adjusted),
+            p_permutation=probability(c.p_permutation),
+            problem=c.problem,
+        )
+        for c in comparisons
+    )
+
+
+def summary(condition: ConditionResult) -> str:
+    """What went into a condition: "3 days, 6 chambers, 12 recordings; 168 of 204 tracks kept"."""
+    n = condition.counts
+    parts = [
+        counted(n.days, "day"),
+        counted(n.chambers, "chamber"),
+        counted(n.recordings, "recording"),
+    ]
+    return f"{joined(parts)}; {n.tracks_kept:,} of {counted(n.tracks_seen, 'track')} kept"
+
+
+def problem_count(condition: ConditionResult, recordings: Iterable[RecordingResult]) -> int:
+    """How many problems of a condition and of its recordings wait to be read on its page."""
+    own = [r for r in recordings if r.condition == condition.condition]
+    return len(condition.problems) + sum(len(r.problems) for r in own)

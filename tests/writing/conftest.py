@@ -1,0 +1,397 @@
+"""An invented study: every record of the results, with paths that look like gliding."""
+
+from __future__ import annotations
+
+import dataclasses
+import itertools
+import math
+from collections.abc import Callable, Sequence
+
+import numpy as np
+import pytest
+
+from glidefit.quantities import QUANTITIES
+from glidefit.results import (
+    ChamberResult,
+    Comparison,
+    ConditionResult,
+    Counts,
+    Curve,
+    DrawnTrack,
+    Drift,
+    Estimate,
+    LevelSpread,
+    Ratio,
+    RecordingResult,
+    SettingRow,
+    StudyResult,
+    TimePoint,
+    TrackResult,
+)
+from glidefit.writing.slugs import slugs
+
+NAN = math.nan
+SPEED, TURNING = 0.8, 0.05
+REASONS = ("stuck", "pivoting", "detached", "jump", "short")
+GENERALISES = "The intervals generalise to further days of this preparation in this laboratory."
+METHODS = (
+    "Gliding filaments were tracked and an active-Brownian model was fitted to the mean squared "
+    "displacement on a logarithmic scale, with localization error and blur of the exposure; "
+    "intervals (95 %) are t intervals over day values."
+)
+
+
+@dataclasses.dataclass(frozen=True, kw_only=True)
+class Size:
+    """How much the invented condition holds."""
+
+    days: int = 3
+    chambers: int = 2  # a day
+    recordings: int = 2  # a chamber
+    tracks: int = 17  # a recording
+    positions: int = 80
+    aside: int = 3  # of the tracks of a recording
+
+
+def estimates() -> dict[str, Estimate]:
+    """All quantities; intervals of all kinds among them."""
+    numbers = {
+        "speed_um_s": (0.8034, 0.7712, 0.8356),
+        "rotational_diffusion_rad2_s": (0.0512, 0.0431, 0.0609),
+        "persistence_length_um": (15.69, 13.1, 18.9),
+        "path_persistence_length_um": (7.845, 6.55, 9.45),
+        "motile_fraction": (0.824, 0.751, 0.897),
+        "ever_moved_fraction": (0.861, 0.79, 0.93),
+        "smallest_speed_um_s": (0.0312, NAN, NAN),
+        "translational_diffusion_um2_s": (0.00021, NAN, 0.00094),
+        "localization_error_um": (0.0312, 0.0309, 0.0315),
+        "speed_spread_um_s": (0.0713, 0.0502, 0.0924),
+        "mean_speed_um_s": (0.7912, 0.7571, 0.8253),
+        "running_fraction": (NAN, NAN, NAN),
+        "turning_rate_rad_s": (-0.0004, -0.0061, 0.0053),
+        "frame_speed_um_s": (0.8531, 0.8204, 0.8858),
+    }
+    problems = {
+        "running_fraction": "The active model knows no pauses.",
+        "translational_diffusion_um2_s": "Not told apart from localization error.",
+    }
+    return {
+        key: Estimate(
+            value=value,
+            low=low,
+            high=high,
+            covers="days" if math.isfinite(low) else "",
+            method="t over day values",
+            problem=problems.get(key, ""),
+        )
+        for key, (value, low, high) in numbers.items()
+    }
+
+
+def no_estimates() -> dict[str, Estimate]:
+    """What a condition with nothing left has."""
+    return dict.fromkeys(QUANTITIES, Estimate(problem="No track was kept."))
+
+
+def _path(rng: np.random.Generator, n: int, *, moving: bool) -> tuple[np.ndarray, np.ndarray]:
+    start = rng.uniform(15, 65, 2)
+    if not moving:
+        return start[0] + rng.normal(0, 0.05, n), start[1] + rng.normal(0, 0.05, n)
+    heading = rng.uniform(-np.pi, np.pi) + np.cumsum(rng.normal(0, np.sqrt(2 * TURNING * 0.2), n))
+    steps = SPEED * 0.2 * np.column_stack([np.cos(heading), np.sin(heading)])
+    x, y = (start + np.cumsum(steps, axis=0)).T
+    return np.clip(x, 0, 80), np.clip(y, 0, 80)
+
+
+def msd_curve(frame_s: float = 0.2, n: int = 60) -> Curve:
+    """A curve near its model, fitted over its first third."""
+    lag = frame_s * np.arange(1, n + 1)
+    u = TURNING * lag
+    model = 2 * (SPEED * lag / u) ** 2 * (u - 1 + np.exp(-u)) + 0.004
+    value = model * (1 + 0.02 * np.sin(lag))
+    fitted = np.arange(n) < n // 3
+    shown = np.where(fitted, model, NAN)
+    columns = (lag, value, 0.93 * value, 1.07 * value, shown, 0.97 * shown, 1.03 * shown)
+    return Curve(**_curve(columns, fitted, frame_s))
+
+
+def correlation_curve(frame_s: float = 0.2, n: int = 60) -> Curve:
+    """An exponential decay with a little scatter."""
+    lag = frame_s * np.arange(1, n + 1)
+    model = 0.99 * np.exp(-TURNING * lag)
+    value = model + 0.01 * np.sin(2 * lag)
+    fitted = np.arange(n) < n // 3
+    shown = np.where(fitted, model, NAN)
+    columns = (lag, value, value - 0.03, value + 0.03, shown, shown - 0.01, shown + 0.01)
+    return Curve(**_curve(columns, fitted, frame_s))
+
+
+def _curve(columns: Sequence[np.ndarray], fitted: np.ndarray, frame_s: float) -> dict:
+    names = ("lag_s", "value", "low", "high", "model", "model_low", "model_high")
+    arrays = {name: tuple(c.tolist()) for name, c in zip(names, columns, strict=True)}
+    return {**arrays, "fitted": tuple(fitted.tolist()), "frame_s": frame_s}
+
+
+def make_condition(
+    name: str, slug: str, *, control: bool = False, size: Size | None = None, seed: int = 1
+) -> tuple[ConditionResult, tuple[RecordingResult, ...]]:
+    """A condition and its recordings."""
+    size = size or Size()
+    rng = np.random.default_rng(seed)
+    chambers, tracks, drawn, points, recordings = [], [], [], [], []
+    for d, c in itertools.product(range(size.days), range(size.chambers)):
+        day, chamber = f"2026-03-{d + 2:02d}", "ABCDEFGHIJKLMNOP"[c]
+        speed = SPEED * (1 + 0.06 * rng.standard_normal())
+        chambers.append(
+            ChamberResult(
+                day=day,
+                chamber=chamber,
+                tracks_kept=size.recordings * (size.tracks - size.aside),
+                frames_kept=size.recordings * (size.tracks - size.aside) * size.positions,
+                speed_um_s=speed,
+                rotational_diffusion_rad2_s=TURNING * (1 + 0.15 * rng.standard_normal()),
+                motile_fraction=float(rng.uniform(0.75, 0.9)),
+                frame_speed_um_s=1.06 * speed,
+            )
+        )
+        for r in range(size.recordings):
+            recording = f"{day}/{slug}_ch{chamber}_{r + 1}.tif"
+            for t in range(size.tracks):
+                kept = t >= size.aside
+                reason = "" if kept else REASONS[(t + r) % 4]
+                x, y = _path(rng, size.positions, moving=kept or reason == "jump")
+                drawn.append(
+                    DrawnTrack(
+                        recording=recording,
+                        track=str(t),
+                        reason=reason,
+                        x_um=tuple(x.round(3).tolist()),
+                        y_um=tuple(y.round(3).tolist()),
+                    )
+                )
+                tracks.append(
+                    TrackResult(
+                        recording=recording,
+                        day=day,
+                        chamber=chamber,
+                        track=str(t),
+                        kept=kept,
+                        set_aside_reason=reason,
+                        n_positions=size.positions,
+                        duration_s=0.2 * (size.positions - 1),
+                        net_advance_um=float(np.hypot(x[-1] - x[0], y[-1] - y[0])),
+                        path_um=float(np.hypot(np.diff(x), np.diff(y)).sum()),
+                        speed_um_s=float(speed + 0.07 * rng.standard_normal()) if kept else NAN,
+                    )
+                )
+            for k in range(5):
+                points.append(
+                    TimePoint(
+                        recording=recording,
+                        day=day,
+                        chamber=chamber,
+                        time_s=3.2 * (k + 0.5),
+                        minutes=4.0 * r + 3.2 * (k + 0.5) / 60,
+                        speed_um_s=speed * (1 + 0.03 * rng.standard_normal()),
+                        motile_fraction=float(rng.uniform(0.75, 0.9)),
+                        n_frames=int(rng.integers(150, 300)),
+                    )
+                )
+            recordings.append(make_recording(recording, name, day, chamber, size=size))
+    n = size.days * size.chambers * size.recordings
+    aside = {
+        reason: sum(t.set_aside_reason == reason for t in tracks)
+        for reason in REASONS
+        if any(t.set_aside_reason == reason for t in tracks)
+    }
+    return (
+        ConditionResult(
+            condition=name,
+            slug=slug,
+            control=control,
+            model="active",
+            counts=Counts(
+                days=size.days,
+                chambers=size.days * size.chambers,
+                recordings=n,
+                tracks_seen=n * size.tracks,
+                tracks_kept=n * (size.tracks - size.aside),
+                set_aside=aside,
+                frames_seen=n * size.tracks * size.positions,
+                frames_kept=n * (size.tracks - size.aside) * size.positions,
+                frames_set_aside={k: v * size.positions for k, v in aside.items()},
+            ),
+            estimates=estimates(),
+            problems=(),
+            msd=(msd_curve(),),
+            heading_correlation=(correlation_curve(),),
+            chambers=tuple(chambers),
+            tracks=tuple(tracks),
+            drawn=tuple(drawn),
+            time_points=tuple(points),
+            spread=tuple(
+                LevelSpread(quantity=q, level=level, units=units, relative_error=error)
+                for q, factor in (("speed_um_s", 1.0), ("rotational_diffusion_rad2_s", 2.6))
+                for level, units, error in (
+                    ("days", size.days, 0.021 * factor),
+                    ("chambers", size.days * size.chambers, 0.011 * factor),
+                    ("recordings", n, 0.006 * factor),
+                    ("tracks", len(tracks), 0.004 * factor),
+                )
+            ),
+            generalises=GENERALISES,
+            longest_lag_s=4.0,
+            heading_diffusion_rad2_s=0.0498,
+            methods=METHODS,
+        ),
+        tuple(recordings),
+    )
+
+
+def make_recording(
+    recording: str, condition: str, day: str, chamber: str, *, size: Size
+) -> RecordingResult:
+    """A video whose exposure is unknown."""
+    return RecordingResult(
+        recording=recording,
+        condition=condition,
+        day=day,
+        chamber=chamber,
+        kind="video",
+        shape="filament",
+        sha256="3f" * 32,
+        n_frames=size.positions,
+        frame_s=0.2,
+        frame_s_source="file",
+        pixel_um=0.1083,
+        pixel_um_source="sheet",
+        exposure_s=NAN,
+        exposure_source="",
+        field_um=(80.0, 80.0),
+        localization_error_um=0.0312,
+        smallest_speed_um_s=0.0301,
+        drift=Drift(
+            measured=True,
+            subtracted=True,
+            n_objects=4,
+            speed_um_s=0.0021,
+            largest_um=0.034,
+            note="subtracted",
+        ),
+        tracks_seen=size.tracks,
+        tracks_kept=size.tracks - size.aside,
+        set_aside={"stuck": size.aside},
+        problems=(),
+    )
+
+
+def setting_rows() -> tuple[SettingRow, ...]:
+    """Some settings of each source."""
+    rows = (
+        ("link.max_speed", "12.0", "µm/s", "default", "Fastest gliding still believed."),
+        ("link.max_gap", "2", "frames", "default", "Longest absence bridged inside a track."),
+        ("clean.stuck", "2.0", "× noise", "default", "A track that strays no farther is stuck."),
+        ("clean.jump", "4.0", "× typical step", "file", "A step longer than this is a jump."),
+        ("fit.unknown_exposure", "1.0", "× frame interval", "default", "Exposure assumed."),
+        ("interval.level", "0.95", "", "default", "Confidence level of the intervals."),
+        ("interval.resamples", "4000", "", "option", "Bootstrap resamples."),
+    )
+    return tuple(
+        SettingRow(key=key, value=value, unit=unit, source=source, help=text)
+        for key, value, unit, source, text in rows
+    )
+
+
+def make_study(
+    names: Sequence[str] = ("kinesin, wild type", "kinesin, R203A"),
+    *,
+    size: Size | None = None,
+    control: str | None = "kinesin, wild type",
+) -> StudyResult:
+    """A study with these conditions."""
+    slug_of = slugs(names)
+    made = [
+        make_condition(name, slug_of[name], control=name == control, size=size, seed=n + 1)
+        for n, name in enumerate(names)
+    ]
+    return StudyResult(
+        name="assay",
+        conditions=tuple(condition for condition, _ in made),
+        comparisons=(),
+        recordings=tuple(itertools.chain.from_iterable(recordings for _, recordings in made)),
+        settings=setting_rows(),
+        problems=(),
+        seed=20260302,
+        version="0.1.0",
+        sheet_sha256="ab" * 32,
+    )
+
+
+def make_comparison(condition: str, reference: str) -> Comparison:
+    """A ratio with its tests."""
+    return Comparison(
+        condition=condition,
+        reference=reference,
+        quantity="speed_um_s",
+        ratio=Ratio(value=1.12, low=1.03, high=1.22, level=0.95),
+        p_value=0.0132,
+        p_adjusted=0.0264,
+        p_permutation=NAN,
+        problem="",
+    )
+
+
+def empty(condition: ConditionResult) -> ConditionResult:
+    """The condition when cleaning has left nothing."""
+    counts = dataclasses.replace(
+        condition.counts,
+        tracks_kept=0,
+        frames_kept=0,
+        set_aside={"stuck": condition.counts.tracks_seen},
+        frames_set_aside={"stuck": condition.counts.frames_seen},
+    )
+    return dataclasses.replace(
+        condition,
+        counts=counts,
+        estimates=no_estimates(),
+        problems=("No track was kept: every track is stuck.",),
+        msd=(),
+        heading_correlation=(),
+        chambers=(),
+        tracks=(),
+        drawn=(),
+        time_points=(),
+        spread=(),
+        longest_lag_s=NAN,
+        heading_diffusion_rad2_s=NAN,
+    )
+
+
+@pytest.fixture(scope="session")
+def invented() -> Callable[..., StudyResult]:
+    """The factory of invented studies."""
+    return make_study
+
+
+@pytest.fixture(scope="session")
+def study() -> StudyResult:
+    """Two conditions, the first the control; 3 days, 2 chambers a day, 204 tracks each."""
+    return make_study()
+
+
+@pytest.fixture(scope="session")
+def compare() -> Callable[[str, str], Comparison]:
+    """The factory of comparisons."""
+    return make_comparison
+
+
+@pytest.fixture(scope="session")
+def emptied() -> Callable[[ConditionResult], ConditionResult]:
+    """What a condition is when cleaning has left nothing."""
+    return empty
+
+
+@pytest.fixture(scope="session")
+def sized() -> type[Size]:
+    """How much an invented condition holds."""
+    return Size
