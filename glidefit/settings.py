@@ -18,7 +18,9 @@ def setting(default: Any, unit: str, help: str, **limits: Any) -> Any:
 
 
 class _Section(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True, allow_inf_nan=False)
+    model_config = ConfigDict(
+        extra="forbid", frozen=True, allow_inf_nan=False, strict=True, str_min_length=1
+    )
 
 
 class ColumnSettings(_Section):
@@ -233,8 +235,8 @@ def resolve(
     sources: dict[str, str] = {}
     errors: list[InputError] = []
     for section, content in (file or {}).items():
-        if not isinstance(content, Mapping):
-            errors.append(_unknown(file_name, section, sorted(Settings.model_fields)))
+        if not isinstance(content, Mapping) or section not in Settings.model_fields:
+            errors.append(_misplaced(file_name, section, content, known))
             continue
         for name, value in content.items():
             key = f"{section}.{name}"
@@ -257,10 +259,39 @@ def resolve(
     return SourcedSettings(values=values, sources=sources)
 
 
+def _misplaced(
+    file_name: str, name: str, content: Any, known: Mapping[str, Declaration]
+) -> InputError:
+    """A section that is none, or a setting that stands in none."""
+    if name in Settings.model_fields:
+        return InputError(
+            file_name,
+            f"{name!r} is {content!r}",
+            expected="a section with settings",
+            remedy=f"Write [{name}] on a line of its own and its settings below.",
+        )
+    if sections := [d.section for d in known.values() if d.name == name]:
+        return InputError(
+            file_name,
+            f"{name!r} stands in no section",
+            expected="every setting in its section",
+            remedy=f"Put it below [{sections[0]}].",
+        )
+    return _unknown(file_name, name, sorted(Settings.model_fields))
+
+
 def _unknown(file_name: str, key: str, known: list[str]) -> InputError:
     near = difflib.get_close_matches(key, known, n=1, cutoff=0.5)
     hint = f"Did you mean {near[0]!r}?" if near else "README.md lists all settings."
     return InputError(file_name, f"{key!r} is no setting", expected="a known setting", remedy=hint)
+
+
+# What the validating library says in words of its own.
+_PLAIN = {
+    "int_type": "a whole number",
+    "int_from_float": "a whole number",
+    "string_too_short": "a name",
+}
 
 
 def _invalid(
@@ -269,7 +300,8 @@ def _invalid(
     key = ".".join(str(part) for part in error["loc"][:2])
     declared = known[key]
     where = f"option {declared.option}" if sources[key] == "option" else f"{file_name}, {key}"
-    message = error["msg"].removeprefix("Input should be ").replace("'", "")
+    message = _PLAIN.get(error["type"]) or error["msg"].removeprefix("Input should be ")
+    message = message.replace("'", "")
     unit = f" ({declared.unit})" if declared.unit else ""
     default = "chosen from the data" if declared.default is None else f"{declared.default}"
     return InputError(

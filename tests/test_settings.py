@@ -110,12 +110,39 @@ def test_defaults_come_through_toml():
         ),
         (
             {"lnk": {"max_speed": 3}},
-            "s.toml: 'lnk.max_speed' is no setting; expected a known setting. "
-            "Did you mean 'link.max_speed'?",
+            "s.toml: 'lnk' is no setting; expected a known setting. Did you mean 'link'?",
         ),
         (
             {"x": {"q": 3}},
-            "s.toml: 'x.q' is no setting; expected a known setting. README.md lists all settings.",
+            "s.toml: 'x' is no setting; expected a known setting. README.md lists all settings.",
+        ),
+        (
+            {"lnk": {}},
+            "s.toml: 'lnk' is no setting; expected a known setting. Did you mean 'link'?",
+        ),
+        (
+            {"link": 3},
+            "s.toml: 'link' is 3; expected a section with settings. Write [link] on a line of its "
+            "own and its settings below.",
+        ),
+        (
+            {"max_speed": 3},
+            "s.toml: 'max_speed' stands in no section; expected every setting in its section. Put "
+            "it below [link].",
+        ),
+        (
+            {"link": {"max_speed": True}},
+            "s.toml, link.max_speed: the value is True; expected a valid number (µm/s). "
+            "The default is 12.0.",
+        ),
+        (
+            {"link": {"max_speed": "8"}},
+            "s.toml, link.max_speed: the value is '8'; expected a valid number (µm/s). "
+            "The default is 12.0.",
+        ),
+        (
+            {"columns": {"track": ""}},
+            "s.toml, columns.track: the value is ''; expected a name. The default is track.",
         ),
         (
             {"link": {"max_speed": -1}},
@@ -129,8 +156,8 @@ def test_defaults_come_through_toml():
         ),
         (
             {"link": {"max_gap": 2.5}},
-            "s.toml, link.max_gap: the value is 2.5; expected a valid integer, got a number with a "
-            "fractional part (frames). The default is 2.",
+            "s.toml, link.max_gap: the value is 2.5; expected a whole number (frames). "
+            "The default is 2.",
         ),
         (
             {"clean": {"drift": "yes"}},

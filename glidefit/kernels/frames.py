@@ -6,7 +6,7 @@ A spot is a Gaussian of standard deviation ``width_px``; lengths are pixels, bri
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numba import njit
@@ -36,7 +36,7 @@ class FilteredFrame(NamedTuple):
     looks: float  # as if so many independent places were looked at
 
 
-def filter_frame(frame: NDArray[np.generic], *, width_px: float, block_px: int) -> FilteredFrame:
+def filter_frame(frame: NDArray[Any], *, width_px: float, block_px: int) -> FilteredFrame:
     """Contrast, significance and noise of a frame with spots and uneven illumination.
 
     The background is interpolated between the means of blocks without their spots. The variance
@@ -74,13 +74,14 @@ def filter_frame(frame: NDArray[np.generic], *, width_px: float, block_px: int) 
     least = max(rounding, _negligible(filtered))
     variance = _variance_line(filtered, background, spots, block_px=block_px, least=least)
 
-    contrast, significance = image - background, filtered / np.sqrt(variance)
+    contrast: Image = image - background
+    significance = (filtered / np.sqrt(variance)).astype(np.float32)
     spots = _around(significance, _SPOT_HEIGHT, near)
     seen = _Empty(*_moments(contrast, filtered, significance, spots))
     return FilteredFrame(
         contrast=contrast,
         significance=significance,
-        noise=np.sqrt(variance * (seen.noise_ratio if seen.n else weight)),
+        noise=np.sqrt(variance * (seen.noise_ratio or weight)),
         background=level,
         skewness=seen.skewness(width_px),
         looks=image.size / (2 * width_px**2 * (2 * math.pi) ** 1.5),
@@ -116,7 +117,8 @@ def _smoothed(image: Image, *, width_px: float) -> Image:
 def _border(shape: tuple[int, ...], *, width_px: float) -> Image:
     """What the filter makes of ones: less towards the border."""
     rows, columns = (_smoothed(np.ones(n, dtype=np.float32), width_px=width_px) for n in shape)
-    return np.multiply.outer(rows, columns)
+    border: Image = np.multiply.outer(rows, columns)
+    return border
 
 
 def _negligible(filtered: Image) -> float:
@@ -133,7 +135,9 @@ def _background(image: Image, spots: Mask, *, block_px: int) -> Image:
     beside, beside_total = (ndimage.uniform_filter(a, 3, mode="nearest") for a in (count, total))
     mean = total.sum() / max(count.sum(), 1.0)
     level = (total + 0.1 * beside_total + 1e-6 * mean) / (count + 0.1 * beside + 1e-6)
-    return _interpolated(level, _places(image.shape[0], rows), _places(image.shape[1], columns))
+    down, right = _places(image.shape[0], rows), _places(image.shape[1], columns)
+    background: Image = _interpolated(level, down, right)
+    return background
 
 
 def _block_edges(n: int, block_px: int) -> NDArray[np.int64]:
@@ -208,7 +212,8 @@ def _variance_line(
     variance, level = total[usable] / count[usable], level[usable] / count[usable]
     slope, mean_level, mean = _robust_line(level, variance)
     line = mean + slope * (np.clip(background, level.min(), level.max()) - mean_level)
-    return np.maximum(line, max(0.1 * mean, least)).astype(np.float32)
+    variances: Image = np.maximum(line, max(0.1 * mean, least)).astype(np.float32)
+    return variances
 
 
 def _robust_line(x: Floats, y: Floats) -> tuple[float, float, float]:
@@ -238,7 +243,7 @@ class _Empty(NamedTuple):
     @property
     def noise_ratio(self) -> float:
         """Variance of a pixel over that of the filtered frame."""
-        return self.contrast_2 / self.filtered_2 if self.filtered_2 > 0 else 0.0
+        return float(self.contrast_2 / self.filtered_2) if self.filtered_2 > 0 else 0.0
 
     def skewness(self, width_px: float) -> float:
         """Skewness of the significance, as seen there and as it follows from the pixels."""
@@ -248,7 +253,7 @@ class _Empty(NamedTuple):
         direct = self.significance_3 * math.sqrt(self.n) / self.significance_2**1.5
         # The filter, a Gaussian h, leaves Σh³/(Σh²)^1.5 of the skewness of independent pixels;
         # seen directly it lacks its own highest values, but holds for any noise.
-        return max(0.0, pixels * 2 / (3 * math.sqrt(math.pi) * width_px), direct)
+        return float(max(0.0, pixels * 2 / (3 * math.sqrt(math.pi) * width_px), direct))
 
 
 @njit(cache=True)
@@ -440,17 +445,15 @@ def _assess(  # type: ignore[no-untyped-def]
     residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score, quality
 ):
     """Precision, amplitude error, score and information of the width, excess variance, spike."""
-    _normal_equations(
-        residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score
-    )
+    _normal_equations(residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score)
     inner = normal[:4, :4].copy()
     covariance = np.linalg.inv(inner)
     quality[0] = math.sqrt((covariance[0, 0] + covariance[1, 1]) / 2)
     quality[1] = math.sqrt(covariance[2, 2])
     # The width, when everything else follows it.
     along = np.linalg.solve(inner, normal[:4, 4].copy())
-    quality[2] = score[4] - along @ score[:4]
-    quality[3] = normal[4, 4] - along @ normal[:4, 4]
+    quality[2] = score[4] - np.sum(along * score[:4])
+    quality[3] = normal[4, 4] - np.sum(along * normal[:4, 4])
     quality[4] = quality[5] = quality[6] = 0.0
     pixels, misfit = 0, 0.0
     h, w = residual.shape

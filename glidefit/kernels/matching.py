@@ -9,6 +9,7 @@ from __future__ import annotations
 import dataclasses
 import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -55,7 +56,9 @@ class TrackStates:
     def none(cls) -> TrackStates:
         """No track."""
         dtypes = {"track": np.int64, "frame": np.int64, "young": np.bool_}
-        return cls(*(np.empty(0, dtype=dtypes.get(f.name, np.float64)) for f in dataclasses.fields(cls)))
+        return cls(
+            *(np.empty(0, dtype=dtypes.get(f.name, np.float64)) for f in dataclasses.fields(cls))
+        )
 
     def select(self, chosen: Ints | Mask) -> TrackStates:
         """Some of the tracks."""
@@ -64,13 +67,15 @@ class TrackStates:
     def joined(self, other: TrackStates) -> TrackStates:
         """These tracks and others, sorted by number."""
         both = TrackStates(
-            *(np.concatenate([getattr(self, f.name), getattr(other, f.name)]) for f in dataclasses.fields(self))
+            *(
+                np.concatenate([getattr(self, f.name), getattr(other, f.name)])
+                for f in dataclasses.fields(self)
+            )
         )
         return both.select(np.argsort(both.track, kind="stable"))
 
 
-@dataclass(frozen=True, slots=True)
-class Spots:
+class Spots(NamedTuple):
     """Spots of one frame, (m,) arrays."""
 
     frame: int
@@ -158,40 +163,33 @@ def reachable(
 
 def _two_laws(
     ahead: TrackStates, i: Ints, spots: Spots, j: Ints, law: MotionLaw
-) -> tuple[Floats, Floats, Floats, Floats]:
-    """Log density of finding spot j, if track i goes on as it did and if it changed.
-
-    Also the two variances of a coordinate.
-    """
+) -> tuple[Floats, Floats]:
+    """Log density of finding spot j, if track i goes on as it did and if it changed."""
     square = (spots.x[j] - ahead.x[i]) ** 2 + (spots.y[j] - ahead.y[i]) ** 2
     same = ahead.pp[i] + spots.precision[j] ** 2 + law.wobble_um**2
     other = same + (law.fast_um_s * (spots.time_s - ahead.time_s[i])) ** 2
     share = np.where(ahead.young[i], law.fast_share, law.changed)
     log_same = np.log((1 - share) / (2 * math.pi * same)) - square / (2 * same)
     log_other = np.log(share / (2 * math.pi * other)) - square / (2 * other)
-    return log_same, log_other, same, other
+    return log_same, log_other
 
 
-def link_gain(
-    ahead: TrackStates, i: Ints, spots: Spots, j: Ints, *, law: MotionLaw
-) -> Floats:
+def link_gain(ahead: TrackStates, i: Ints, spots: Spots, j: Ints, *, law: MotionLaw) -> Floats:
     """Log of how much likelier it is that spot j continues track i than that it does not.
 
     ``ln f(displacement) + ln((1 - missed) / missed) - ln births``: the alternative is that the
     track is missed or over and another one begins here. A track that was missing already is as
     likely over as not.
     """
-    log_same, log_other, _, _ = _two_laws(ahead, i, spots, j, law)
+    log_same, log_other = _two_laws(ahead, i, spots, j, law)
     missed = np.where(ahead.frame[i] < spots.frame - 1, np.maximum(law.missed, 0.5), law.missed)
     gain: Floats = np.logaddexp(log_same, log_other) + np.log((1 - missed) / missed / law.births)
     return gain
 
 
-def continued(
-    ahead: TrackStates, i: Ints, spots: Spots, j: Ints, *, law: MotionLaw
-) -> TrackStates:
+def continued(ahead: TrackStates, i: Ints, spots: Spots, j: Ints, *, law: MotionLaw) -> TrackStates:
     """Tracks i after they were seen as spots j; one that changed has its velocity anew."""
-    log_same, log_other, same, other = _two_laws(ahead, i, spots, j, law)
+    log_same, log_other = _two_laws(ahead, i, spots, j, law)
     chance = 1 / (1 + np.exp(np.clip(log_same - log_other, -50, 50)))
     dt = spots.time_s - ahead.time_s[i]
     extra = chance * law.fast_um_s**2
@@ -265,8 +263,8 @@ def clear_steps(before: Spots, after: Spots, *, max_speed: float) -> tuple[Ints,
     if min(len(before.x), len(after.x)) == 0:
         return np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64)
     old, new = (np.column_stack([spots.x, spots.y]) for spots in (before, after))
-    forth, target = cKDTree(new).query(old, k=[1, 2])
-    back, source = cKDTree(old).query(new, k=[1, 2])
+    forth, target = map(np.asarray, cKDTree(new).query(old, k=[1, 2]))
+    back, source = map(np.asarray, cKDTree(old).query(new, k=[1, 2]))
     i, j = np.arange(len(old)), target[:, 0]
     clear = (source[j, 0] == i) & (2 * forth[:, 0] <= forth[:, 1]) & (2 * back[j, 0] <= back[j, 1])
     clear &= forth[:, 0] <= max_speed * (after.time_s - before.time_s)

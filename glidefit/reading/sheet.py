@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -72,7 +72,7 @@ def read_sheet(path: Path) -> Assay:
     errors = formula_errors(cells)
     columns, wrong = column_names(cells)
     errors += wrong
-    rows = [row for row in _rows(cells, columns, errors) if row is not None]
+    rows = list(_rows(cells, columns, errors))
     if not cells.rows:
         errors.append(_no_rows(cells))
     for row in rows:
@@ -110,7 +110,7 @@ def _sheet_cells(path: Path) -> Cells:
     suffix = path.suffix.lower()
     if suffix == ".xlsx":
         return read_workbook(path, called=path.name, expected=_SHEET)
-    if suffix == ".csv" or path.is_dir() or not path.exists():
+    if suffix == ".csv" or os.path.isdir(path) or not os.path.exists(path):
         return read_csv(path, called=path.name, expected=_SHEET, known=KNOWN)
     raise InputError(
         path.name,
@@ -129,11 +129,9 @@ def _no_rows(cells: Cells) -> InputError:
     )
 
 
-def _rows(
-    cells: Cells, columns: Mapping[str, int], errors: list[InputError]
-) -> Iterable[_Row | None]:
-    for number_, row in zip(cells.row_numbers, cells.rows, strict=True):
-        where = f"{cells.file}, row {number_}"
+def _rows(cells: Cells, columns: Mapping[str, int], errors: list[InputError]) -> Iterator[_Row]:
+    for row_number, row in zip(cells.row_numbers, cells.rows, strict=True):
+        where = f"{cells.file}, row {row_number}"
         # The cells of a row that is too long may all have moved: checking them helps nobody.
         if any(text.strip() for text in row[len(cells.header) :]):
             errors.append(_too_long(row, cells, where))
@@ -141,7 +139,7 @@ def _rows(
         text = {name: row[i].strip() if i < len(row) else "" for name, i in columns.items()}
         broken = {name for name, content in text.items() if holds_formula(content)}
         text.update(dict.fromkeys(broken, ""))
-        yield _Row(number=number_, where=where, text=text, broken=broken, values={})
+        yield _Row(number=row_number, where=where, text=text, broken=broken, values={})
 
 
 def _too_long(row: Sequence[str], cells: Cells, where: str) -> InputError:

@@ -171,19 +171,20 @@ def _spots(
     """Spots of one frame, and what is known of the optics after it."""
     height = detection_height(threshold, looks=filtered.looks, skewness=filtered.skewness)
     x, y = _candidates(filtered, height, diameter_px)
+    shape = filtered.contrast.shape
     if len(x) == 0:
         return _fit(filtered, x, y, optics, diameter_px), optics
     learned = optics
     for _ in range(1 if optics.spots >= _ENOUGH_SPOTS else 4):
         fitted = _fit(filtered, x, y, learned, diameter_px)
-        alone = _alone(x, y, 2 * diameter_px) & (fitted.amplitude > 0)
-        learned = optics.learned(fitted, alone)
-    good = _trusted(fitted, threshold, filtered.contrast.shape)
-    good &= _distinct(fitted, learned.width_px, diameter_px)
-    if good.all():
-        return fitted, learned
-    x, y = fitted.x_px[good], fitted.y_px[good]
-    return _fit(filtered, x, y, learned, diameter_px), learned
+        alone = _alone(x, y, 2 * diameter_px)
+        learned = optics.learned(fitted, alone & _trusted(fitted, threshold, shape))
+    good = _trusted(fitted, threshold, shape) & _distinct(fitted, learned.width_px, diameter_px)
+    if not good.all():
+        x, y = fitted.x_px[good], fitted.y_px[good]
+        fitted = _fit(filtered, x, y, learned, diameter_px)
+        good = _trusted(fitted, threshold, shape)
+    return FittedSpots(*(column[good] for column in fitted)), learned
 
 
 def _fit(

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Sequence
+import itertools
+import math
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -71,13 +73,15 @@ def link(
         For times that do not increase.
     """
     _check(times_s, detections.n_frames, where)
+    if len(detections.frame) == 0:
+        return _tracks(detections, times_s, np.empty(0, dtype=np.int64)), ()
     spots = _spots(detections, times_s)
     seen = spots[:_LEARNING_FRAMES]
     law = _first_law(seen, settings)
     for _ in range(2):
         law = _learned(law, seen, _linked(seen, law, settings)[0], settings)
     track, crowds = _linked(spots, law, settings)
-    notes = (*_crowd_notes(crowds), *_speed_notes(spots, law, settings, times_s))
+    notes = (*_crowd_notes(crowds), *_speed_notes(law, seen, settings))
     return _tracks(detections, times_s, track), notes
 
 
@@ -105,13 +109,11 @@ def _spots(detections: Detections, times_s: Floats) -> list[Spots]:
             detections.y_um[a:b],
             detections.precision_um[a:b],
         )
-        for f, (a, b) in enumerate(zip(cuts[:-1], cuts[1:], strict=True))
+        for f, (a, b) in enumerate(itertools.pairwise(cuts))
     ]
 
 
-def _linked(
-    spots: Sequence[Spots], law: MotionLaw, settings: LinkSettings
-) -> tuple[Ints, Ints]:
+def _linked(spots: Sequence[Spots], law: MotionLaw, settings: LinkSettings) -> tuple[Ints, Ints]:
     """Track of each position (n,), and the largest crowd of each frame (f,)."""
     longest_s = 1.5 * (settings.max_gap + 1) * _usual_interval(spots)
     states = TrackStates.none()
@@ -143,17 +145,16 @@ def _usual_interval(spots: Sequence[Spots]) -> float:
     return float(np.median(np.diff(times))) if len(times) > 1 else 1.0
 
 
-def _area(spots: Sequence[Spots]) -> float:
-    """Area of the field that has spots, µm²."""
+def _density(spots: Sequence[Spots]) -> float:
+    """Spots per µm² of a frame, in the part of the field that has spots."""
     x, y = (np.concatenate([getattr(s, name) for s in spots]) for name in ("x", "y"))
-    return max(float(np.ptp(x) * np.ptp(y)), 1.0) if len(x) else 1.0
+    return len(x) / len(spots) / max(float(np.ptp(x) * np.ptp(y)), 1.0) if len(x) else 0.0
 
 
 def _first_law(spots: Sequence[Spots], settings: LinkSettings) -> MotionLaw:
     """From the steps that cannot be mistaken."""
-    density = sum(len(s.x) for s in spots) / (_area(spots) * max(len(spots), 1))
     steps: list[Floats] = [np.empty((3, 0))]
-    for before, after in zip(spots[:-1], spots[1:], strict=True):
+    for before, after in itertools.pairwise(spots):
         i, j = clear_steps(before, after, max_speed=settings.max_speed)
         square = (after.x[j] - before.x[i]) ** 2 + (after.y[j] - before.y[i]) ** 2
         noise = before.precision[i] ** 2 + after.precision[j] ** 2
@@ -166,11 +167,12 @@ def _first_law(spots: Sequence[Spots], settings: LinkSettings) -> MotionLaw:
         turning=1.0,
         wobble_um=0.0,
         missed=0.05,
-        births=max(0.05 * density, 1e-9),
+        births=max(0.05 * _density(spots), 1e-9),
     )
 
 
 def _speeds(steps: Floats, settings: LinkSettings) -> tuple[float, float, float]:
+    """Slow, fast and the share of the fast, from rows of squared steps, their times, noise."""
     if steps.shape[1] < _FEWEST_STEPS:  # too few to learn from: anything up to the largest speed
         return settings.max_speed / 30, settings.max_speed / 3, 0.5
     slow, fast, share = speed_mixture(*steps, max_speed=settings.max_speed)
@@ -181,29 +183,26 @@ def _learned(
     law: MotionLaw, spots: Sequence[Spots], track: Ints, settings: LinkSettings
 ) -> MotionLaw:
     """From the tracks that the law before has given."""
-    x, y, precision = (
-        np.concatenate([np.empty(0), *(getattr(s, name) for s in spots)])
-        for name in ("x", "y", "precision")
-    )
-    counts = [len(s.x) for s in spots]
-    frame = np.repeat(np.arange(len(spots)), counts)
-    time_s = np.repeat([s.time_s for s in spots], counts)
-    order = np.lexsort((frame, track))
-    x, y, precision, frame, time_s, track = (
-        a[order] for a in (x, y, precision, frame, time_s, track)
-    )
+    if len(track) == 0:
+        return law
+    columns = [[np.full(len(s.x), s.frame), np.full(len(s.x), s.time_s), *s[2:]] for s in spots]
+    rows = np.concatenate(columns, axis=1)
+    order = np.lexsort((rows[0], track))
+    track, (frame, time_s, x, y, precision) = track[order], rows[:, order]
+
     inside = np.diff(track) == 0
     noise = precision[1:] ** 2 + precision[:-1] ** 2 + 2 * law.wobble_um**2
     steps = np.stack([np.diff(x) ** 2 + np.diff(y) ** 2, np.diff(time_s), noise])[:, inside]
     slow, fast, share = _speeds(steps, settings)
+
     runs = np.arange(max(len(x) - 4, 0))[:, None] + np.arange(5)
-    runs = runs[(track[runs[:, 4]] == track[runs[:, 0]]) & (frame[runs[:, 4]] == frame[runs[:, 0]] + 4)]
+    first, last = runs[:, 0], runs[:, 4]
+    runs = runs[(track[last] == track[first]) & (frame[last] == frame[first] + 4)]
     turning, wobble = turning_and_wobble(x[runs], y[runs], time_s[runs], precision[runs])
-    begun = int(np.sum(frame[np.flatnonzero(np.diff(track, prepend=-1))] > 0))
+
+    begun = int(np.sum(frame[np.diff(track, prepend=-1) != 0] > 0))
     lost = int(np.sum(np.diff(frame)[inside] - 1))
-    seen = max(len(x), 1)
-    density = seen / (_area(spots) * max(len(spots), 1))
-    births = (begun + 1) / (_area(spots) * max(len(spots), 1))
+    density = _density(spots)
     return dataclasses.replace(
         law,
         slow_um_s=slow,
@@ -211,28 +210,39 @@ def _learned(
         fast_share=share,
         turning=law.turning if turning is None else float(np.clip(turning, 0.02, 5.0)),
         wobble_um=law.wobble_um if wobble is None else wobble,
-        missed=float(np.clip((lost + begun) / (seen + lost), 0.01, 0.3)),
-        births=float(np.clip(births, 2e-3 * density, density)),
+        missed=float(np.clip((lost + begun) / (len(x) + lost), 0.01, 0.3)),
+        births=float(np.clip((begun + 1) / len(x), 2e-3, 1.0)) * density,
     )
 
 
-def _crowd_notes(crowds: Ints) -> tuple[str, ...]:
+def _crowd_notes(crowds: Ints) -> Iterator[str]:
     crowded = np.flatnonzero(crowds > _CROWD)
-    if len(crowded) == 0:
-        return ()
-    worst = int(np.argmax(crowds))
-    more = f" (and in {len(crowded) - 1} other frames)" if len(crowded) > 1 else ""
-    return (
-        f"In frame {worst}{more} {crowds[worst]} spots lie so close that their links compete, and "
-        "some of the tracks may go on with another spot. A higher detect.threshold finds fewer "
-        "faint spots; a lower link.max_speed has fewer links to choose from.",
-    )
+    if len(crowded):
+        worst = int(np.argmax(crowds))
+        more = f" and in {len(crowded) - 1} more" if len(crowded) > 1 else ""
+        yield (
+            f"In frame {worst}{more}, {crowds[worst]} spots lie so close that their links compete, "
+            "and a track may go on with another's spot. A higher detect.threshold finds fewer "
+            "faint spots; a lower link.max_speed leaves fewer links to choose from."
+        )
 
 
-def _speed_notes(
-    spots: Sequence[Spots], law: MotionLaw, settings: LinkSettings, times_s: Floats
-) -> tuple[str, ...]:
-    return ()
+def _speed_notes(law: MotionLaw, spots: Sequence[Spots], settings: LinkSettings) -> Iterator[str]:
+    speed, density = math.sqrt(2) * law.fast_um_s, _density(spots)
+    step = speed * _usual_interval(spots)
+    # Crocker & Grier, J. Colloid Interface Sci. 179, 298 (1996), from memory: links hold while a
+    # step is well under half the way to the nearest neighbour, 0.5/√density on average.
+    if density > 0 and step > 0.25 / math.sqrt(density):
+        yield (
+            f"Spots move {step:.2g} µm from frame to frame and the next one is usually "
+            f"{0.5 / math.sqrt(density):.2g} µm away, so that tracks may have been exchanged: "
+            "film faster or with fewer spots."
+        )
+    if speed > 0.5 * settings.max_speed:
+        yield (
+            f"Spots move at {speed:.2g} µm/s, and link.max_speed, {settings.max_speed:g} µm/s, "
+            "may cut the fastest tracks."
+        )
 
 
 def _tracks(detections: Detections, times_s: Floats, track: Ints) -> Tracks:

@@ -139,7 +139,7 @@ def svg_text(figure: Figure, *, key: str, title: str, description: str) -> str:
     """
     out = io.StringIO()
     figure.savefig(out, format="svg", metadata=dict.fromkeys(("Date", "Creator", "Format", "Type")))
-    root = ET.fromstring(out.getvalue())
+    root = ET.fromstring(visible(out.getvalue()))
     used = {
         found
         for element in root.iter()
@@ -183,7 +183,7 @@ def _element(element: ET.Element, *, key: str, used: set[str]) -> str:
         else:
             attributes[name] = _DOT.sub(r"M\1 \2h0", _short(" ".join(value.split())))
     inside = "".join(_element(child, key=key, used=used) for child in element)
-    inside = escape(visible(element.text or "").strip(), quote=False) + inside
+    inside = escape((element.text or "").strip(), quote=False) + inside
     if not attributes and tag in {"g", "defs"}:
         return inside if tag == "g" or not inside else f"<defs>{inside}</defs>"
     start = "".join(f' {name}="{escape(value)}"' for name, value in attributes.items())
@@ -216,13 +216,17 @@ def _short(text: str) -> str:
 
 
 def log_ticks(low: float, high: float) -> list[float]:
-    """Round numbers between two positive ends: decades, or 1-2-5 if these are too few."""
+    """Round numbers between two positive ends: decades, or finer if these are too few."""
+    from matplotlib.ticker import MaxNLocator
+
     first, last = math.floor(math.log10(low)), math.ceil(math.log10(high))
-    for steps in ((1,), (1, 3), (1, 2, 5), (1, 1.5, 2, 3, 4, 5, 6, 8)):
+    for steps in ((1,), (1, 3), (1, 2, 5)):
         ticks = [m * 10.0**p for p in range(first, last + 1) for m in steps]
         inside = [t for t in ticks if low <= t <= high]
         if len(inside) >= 3:
             break
+    else:
+        inside = [t for t in MaxNLocator(5).tick_values(low, high).tolist() if low <= t <= high]
     every = -(-len(inside) // 6)
     return inside[::every]
 

@@ -125,7 +125,7 @@ def _interval(low: str, high: str, power: int) -> str:
         return f"at least {_scaled(low, power)}"
     if not low:
         return f"at most {_scaled(high, power)}"
-    return f"({low} to {high}){_power(power)}" if power else f"{low} to {high}"
+    return f"{_scaled(low, power)} to {_scaled(high, power)}"
 
 
 def _scaled(text: str, power: int) -> str:

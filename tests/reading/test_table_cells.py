@@ -1,5 +1,6 @@
 """Cells of tables: numbers, places, delimiters, and damaged workbooks."""
 
+import datetime
 import io
 import random
 
@@ -7,9 +8,17 @@ import openpyxl
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from openpyxl.worksheet.formula import ArrayFormula, DataTableFormula
 
 from glidefit.errors import InputError
-from glidefit.reading.table_cells import Cells, has_decimal_comma, number, read_csv, read_workbook
+from glidefit.reading.table_cells import (
+    Cells,
+    formula_errors,
+    has_decimal_comma,
+    number,
+    read_csv,
+    read_workbook,
+)
 
 
 @given(value=st.floats(allow_nan=False, allow_infinity=False))
@@ -85,6 +94,31 @@ def test_the_delimiter_is_the_one_that_finds_known_names(tmp_path, header, delim
     path.write_text(f"{header}\n")
     found = read_csv(path, called="t.csv", expected="a table", known=["track", "frame"])
     assert found.delimiter == delimiter
+
+
+def test_a_formula_that_fills_a_range_is_one(tmp_path):
+    book = openpyxl.Workbook()
+    book.active.append(["recording"])
+    book.active["A2"] = ArrayFormula("A2:A3", "=B2:B3*2")
+    book.active["A4"] = DataTableFormula("A4:A5")
+    book.active["A6"] = datetime.timedelta(hours=1, minutes=5)
+    book.save(tmp_path / "t.xlsx")
+    found = read_workbook(tmp_path / "t.xlsx", called="t.xlsx", expected="a table")
+    assert found.rows == [["=B2:B3*2"], ["={…}"], ["1:05:00"]]
+    assert [str(error).split(";")[0] for error in formula_errors(found)] == [
+        't.xlsx, cell A2: holds the formula "=B2:B3*2"',
+        't.xlsx, cell A4: holds the formula "={…}"',
+    ]
+
+
+def test_a_byte_without_a_sign_is_named_by_its_number(tmp_path):
+    (tmp_path / "t.csv").write_bytes(b"recording\na\x81.tif\n")
+    with pytest.raises(InputError) as caught:
+        read_csv(tmp_path / "t.csv", called="t.csv", expected="a table", known=["recording"])
+    assert str(caught.value) == (
+        "t.csv: line 2 holds the byte 0x81, which is not UTF-8; expected text in UTF-8. "
+        "In the spreadsheet program, save it as 'CSV UTF-8'."
+    )
 
 
 def workbook():

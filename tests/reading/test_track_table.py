@@ -398,9 +398,9 @@ def test_no_frame_interval(tmp_path):
 
 
 def test_times_that_contradict_the_sheet(tmp_path):
-    text = "track,frame,time_s,x_um,y_um\na,0,0,0,0\na,1,0.52,0,0\n"
+    text = "track,frame,time_s,x_um,y_um\na,0,0,0,0\na,1,0.506,0,0\n"
     assert problem(tmp_path, text, frame_s=0.5, where="day1/t.csv") == (
-        "day1/t.csv: its times advance by 0.52 s per frame (median), but frame_s in "
+        "day1/t.csv: its times advance by 0.506 s per frame (median), but frame_s in "
         "the assay sheet is 0.5 s; expected the same frame interval from both, within 1 %. "
         "Correct frame_s, or leave it empty to use the times of the table."
     )

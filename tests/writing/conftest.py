@@ -5,7 +5,9 @@ from __future__ import annotations
 import dataclasses
 import itertools
 import math
+import re
 from collections.abc import Callable, Sequence
+from html.parser import HTMLParser
 
 import numpy as np
 import pytest
@@ -395,3 +397,126 @@ def emptied() -> Callable[[ConditionResult], ConditionResult]:
 def sized() -> type[Size]:
     """How much an invented condition holds."""
     return Size
+
+
+class PageReader(HTMLParser):
+    """Reads a page strictly: every tag closed where it belongs, every attribute quoted."""
+
+    VOID = frozenset({"meta", "br", "link", "img", "hr", "input", "wbr"})
+    QUOTED = re.compile(r"<[\w:-]+(\s+[\w:-]+=(\"[^\"<>]*\"|'[^'<>]*'))*\s*/?>")
+
+    def __init__(self) -> None:
+        super().__init__(convert_charrefs=True)
+        self.open: list[str] = []
+        self.elements: list[tuple[str, dict[str, str]]] = []
+        self.faults: list[str] = []
+        self.words: list[str] = []
+
+    def handle_starttag(self, tag: str, attrs: list) -> None:
+        self._element(tag, attrs)
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag: str, attrs: list) -> None:
+        self._element(tag, attrs)
+
+    def _element(self, tag: str, attrs: list) -> None:
+        source = self.get_starttag_text() or ""
+        if not self.QUOTED.fullmatch(source):
+            self.faults.append(f"not quoted: {source}")
+        if len({name for name, _ in attrs}) != len(attrs):
+            self.faults.append(f"attribute twice: {source}")
+        self.elements.append((tag, dict(attrs)))
+
+    def handle_endtag(self, tag: str) -> None:
+        if not self.open or self.open.pop() != tag:
+            self.faults.append(f"</{tag}> closes nothing")
+
+    def handle_data(self, data: str) -> None:
+        inside = self.open[-1] if self.open else ""
+        drawn = "svg" in self.open and inside not in {"title", "desc"}
+        if inside not in {"style", "script"} and not drawn and data.strip():
+            self.words.append(" ".join(data.split()))
+
+    @property
+    def ids(self) -> list[str]:
+        """Every id of the page."""
+        return [attrs["id"] for _, attrs in self.elements if "id" in attrs]
+
+    def of(self, tag: str) -> list[dict[str, str]]:
+        """Attributes of every element with this tag."""
+        return [attrs for name, attrs in self.elements if name == tag]
+
+
+@pytest.fixture(scope="session")
+def read_page() -> Callable[[str], PageReader]:
+    """Read a page and fail if it is not well formed."""
+
+    def read(text: str) -> PageReader:
+        reader = PageReader()
+        reader.feed(text)
+        reader.close()
+        assert reader.faults == []
+        assert reader.open == []
+        assert len(set(reader.ids)) == len(reader.ids)
+        return reader
+
+    return read
+
+
+HOSTILE = (
+    "<script>alert(1)</script>",
+    "../../x",
+    '" onmouseover="alert(1)" x=\'',
+    "\u202eRTL \u2066 \x00\x07 \ud800 بث",
+    "µM 対照 " + "longname" * 30,
+    "$x^2$ & {{ 7 * 7 }} {% raw %}",
+    "",
+)
+
+
+@pytest.fixture(scope="session")
+def hostile() -> StudyResult:
+    """A study in which every text of the user tries to leave its place."""
+    text = "</td></svg></title><script>alert(2)</script><img src=x onerror=alert(3)>\x1b"
+    whose = {"day": f"<b>{text}", "chamber": text}
+    study = make_study(HOSTILE, size=Size(days=2, chambers=1, recordings=1, tracks=6), control="")
+    replace = dataclasses.replace
+    conditions = [
+        replace(
+            c,
+            chambers=tuple(replace(x, **whose) for x in c.chambers),
+            tracks=tuple(replace(x, track=text, **whose) for x in c.tracks),
+            drawn=tuple(replace(x, track=text, reason=x.reason and text) for x in c.drawn),
+            time_points=tuple(replace(x, **whose) for x in c.time_points),
+            counts=replace(c.counts, set_aside={text: 3}, frames_set_aside={text: 240}),
+            estimates={
+                key: replace(e, covers=text, method=text, problem=text)
+                for key, e in c.estimates.items()
+            },
+            spread=tuple(replace(x, quantity=text, level=text) for x in c.spread),
+            problems=(text,),
+            generalises=text,
+            methods=text,
+            model=text,
+        )
+        for c in study.conditions
+    ]
+    note = {"pixel_um_source": text, "exposure_source": text, "kind": text, "shape": text}
+    recordings = [
+        replace(
+            r, drift=replace(r.drift, note=text), sha256=text, problems=(text,), **note, **whose
+        )
+        for r in study.recordings
+    ]
+    return replace(
+        study,
+        name=text,
+        conditions=tuple(conditions),
+        recordings=tuple(recordings),
+        comparisons=(replace(make_comparison(text, text), quantity=text, problem=text),),
+        settings=tuple(replace(s, value=text, unit=text, help=text) for s in study.settings),
+        problems=(text,),
+        version=text,
+        sheet_sha256=text,
+    )

@@ -54,5 +54,5 @@ def test_provenance_keeps_order_and_writes_nan_as_null():
 
 
 def test_provenance_refuses_what_json_does_not_know():
-    with pytest.raises(ValueError, match="provenance.path: JSON has no set"):
+    with pytest.raises(ValueError, match=r"provenance.path: JSON has no set"):
         provenance_text({"path": {1, 2}})

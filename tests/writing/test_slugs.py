@@ -39,7 +39,12 @@ def test_long_names_are_cut_and_stay_apart():
 
 
 def test_same_slug_is_numbered_and_never_taken_twice():
-    assert slugs(["a", "A", "a!", "a-2", "a"]) == {"a": "a", "A": "a-2", "a!": "a-3", "a-2": "a-2-2"}
+    assert slugs(["a", "A", "a!", "a-2", "a"]) == {
+        "a": "a",
+        "A": "a-2",
+        "a!": "a-3",
+        "a-2": "a-2-2",
+    }
 
 
 @given(st.lists(st.text(max_size=90), unique=True))
