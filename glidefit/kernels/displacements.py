@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Sums = tuple[Floats, Floats]
+OfGrids = Callable[..., Sums]
 
 # Cells of one grid, 8 MB a column of doubles.
 _CELLS_OF_A_GRID = 1_000_000
@@ -101,7 +102,7 @@ def track_sums(
     columns: Sequence[Floats],
     *,
     lags: Ints,
-    of_grids: Callable[..., Sums],
+    of_grids: OfGrids,
 ) -> Sums:
     """Sums and counts of a whole track table, by way of one grid a group of `grid_groups`.
 

@@ -96,8 +96,8 @@ def common_displacement(frame: Ints, index: Ints, x: Floats, n_frames: int) -> F
     shift = np.zeros(n_frames)
     for _ in range(50):
         place = np.bincount(index, weights=x - shift[frame]) / owned
-        new = np.bincount(frame, weights=x - place[index], minlength=n_frames)
-        new = new / np.maximum(seen, 1)
+        left = np.bincount(frame, weights=x - place[index], minlength=n_frames)
+        new = np.asarray(left / np.maximum(seen, 1), dtype=np.float64)
         new -= new[seen > 0].mean()
         done = np.abs(new - shift).max() < 1e-9
         shift = new

@@ -121,10 +121,7 @@ def measure(frame: Ints, offsets: Ints, x: Floats, y: Floats, *, noise: float) -
     noise : float
         Localization error in µm.
     """
-    rows = [
-        _measure_one(frame[a:b], x[a:b], y[a:b], noise)
-        for a, b in itertools.pairwise(offsets)
-    ]
+    rows = [_measure_one(frame[a:b], x[a:b], y[a:b], noise) for a, b in itertools.pairwise(offsets)]
     table = np.array(rows, dtype=np.float64).reshape(-1, 8)
     return Motion(
         spread_um=table[:, 0],

@@ -23,6 +23,8 @@ Floats = NDArray[np.float64]
 
 # The sheet and the file may differ by this share before it is a contradiction.
 _AGREE = 0.01
+# Columns of a sheet that tell the field of a track table; `glidefit track` fills them.
+FIELD_COLUMNS = ("field_width_um", "field_height_um")
 # The box around all tracks is a little smaller than the field they were seen in.
 _BOX_MARGIN = 1.02
 
@@ -120,7 +122,7 @@ def prepare(task: Task) -> Prepared:
 def _from_table(task: Task) -> Tracked:
     from glidefit.reading.track_table import read_track_table
 
-    recording, fit = task.recording, task.settings.fit
+    recording = task.recording
     table = read_track_table(
         recording.path,
         columns=task.settings.columns,
@@ -130,15 +132,7 @@ def _from_table(task: Task) -> Tracked:
     )
     tracks = _frame_range(table.tracks, recording)
     exposure, source = _exposure(recording, None, table.frame_s)
-    box = float(np.ptp(tracks.x_um)) * _BOX_MARGIN, float(np.ptp(tracks.y_um)) * _BOX_MARGIN
-    width, height = fit.field_width or box[0], fit.field_height or box[1]
-    if width < box[0] / _BOX_MARGIN or height < box[1] / _BOX_MARGIN:
-        raise InputError(
-            f"{recording.where}, {recording.name}",
-            f"tracks extend over {box[0] / _BOX_MARGIN:.4g} × {box[1] / _BOX_MARGIN:.4g} µm",
-            expected=f"tracks inside the field of {width:.4g} × {height:.4g} µm",
-            remedy="Correct fit.field_width and fit.field_height, or the unit of the positions.",
-        )
+    width, height = _field(tracks, task)
     return Tracked(
         tracks=tracks,
         kind="track table",
@@ -152,6 +146,28 @@ def _from_table(task: Task) -> Tracked:
         field_um=(width, height),
         notes=table.notes,
     )
+
+
+def _field(tracks: Tracks, task: Task) -> tuple[float, float]:
+    """Width and height in µm: from the settings, the sheet, or the box around all tracks."""
+    recording, fit = task.recording, task.settings.fit
+    box = float(np.ptp(tracks.x_um)), float(np.ptp(tracks.y_um))
+    told = [recording.numbers.get(name) for name in FIELD_COLUMNS]
+    width, height = (
+        setting or in_sheet or side * _BOX_MARGIN
+        for setting, in_sheet, side in zip(
+            (fit.field_width, fit.field_height), told, box, strict=True
+        )
+    )
+    if width < box[0] or height < box[1]:
+        raise InputError(
+            f"{recording.where}, {recording.name}",
+            f"tracks extend over {box[0]:.4g} × {box[1]:.4g} µm",
+            expected=f"tracks inside the field of {width:.4g} × {height:.4g} µm",
+            remedy="Correct fit.field_width and fit.field_height (or field_width_um and "
+            "field_height_um in the sheet), or the unit of the positions.",
+        )
+    return width, height
 
 
 def _frame_range(tracks: Tracks, recording: Recording) -> Tracks:

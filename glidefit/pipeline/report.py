@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
-from glidefit.errors import OutputError
+from glidefit.errors import InputError, OutputError
 from glidefit.results import StudyResult
 
 
@@ -20,14 +20,38 @@ def pages_of(result: StudyResult) -> dict[str, str]:
 
 
 def report(run: Path) -> StudyResult:
-    """Write the pages of a run folder anew from its results.json."""
+    """Write the pages of a run folder anew from its results.json.
+
+    Raises
+    ------
+    InputError
+        For results that cannot be read, or that name pages outside their folder.
+    OutputError
+        If a page cannot be written.
+    """
     from glidefit.reading.results_file import read_results
 
-    result = read_results(run / "results.json" if run.is_dir() else run)
+    source = run / "results.json" if run.is_dir() else run
+    result = read_results(source)
+    _check_slugs(source, result)
     target = run if run.is_dir() else run.parent
     for name, text in pages_of(result).items():
         _replace(target / name, text)
     return result
+
+
+def _check_slugs(source: Path, result: StudyResult) -> None:
+    """The file may come from anybody; its slugs become paths."""
+    from glidefit.writing.slugs import slug
+
+    for condition in result.conditions:
+        if condition.slug != slug(str(condition.slug)):
+            raise InputError(
+                str(source),
+                f"the slug of condition {condition.condition!r} is {condition.slug!r}",
+                expected="a name of a-z, 0-9 and hyphens, as a run writes it",
+                remedy="Take the results.json of a finished run, or run the analysis again.",
+            )
 
 
 def _replace(path: Path, text: str) -> None:

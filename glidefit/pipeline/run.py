@@ -98,44 +98,82 @@ def read_assay(sheets: Sequence[Path]) -> Assay:
     """
     from glidefit.reading.sheet import read_sheet
 
+    if len(sheets) == 1:
+        return read_sheet(sheets[0])
     assays: list[Assay] = []
-    errors: list[InputError] = []
-    for sheet in sheets:
+    errors = _given_twice(sheets)
+    labels = _labels(sheets)
+    for sheet, label in zip(sheets, labels, strict=True):
         try:
-            assays.append(read_sheet(sheet))
-        except InputErrors as error:
-            errors += error.errors
-        except InputError as error:
-            errors.append(error)
+            assays.append(_labelled(read_sheet(sheet), sheet, label))
+        except InputErrors as wrong:
+            errors += [_moved(error, sheet, label) for error in wrong.errors]
     if errors:
         raise InputErrors(errors)
-    if len(assays) == 1:
-        return assays[0]
-    return _joined(assays)
+    return _joined(assays, labels)
 
 
-def _joined(assays: list[Assay]) -> Assay:
-    """Recordings of all sheets; names carry their sheet, so that they stay apart."""
+def _given_twice(sheets: Sequence[Path]) -> list[InputError]:
+    first: dict[Path, Path] = {}
+    for sheet in sheets:
+        if first.setdefault(sheet.resolve(), sheet) is not sheet:
+            error = InputError(
+                str(sheet), "given twice", expected="each sheet once", remedy="Name it once."
+            )
+            return [error]
+    return []
+
+
+def _labels(sheets: Sequence[Path]) -> list[str]:
+    """Name of each sheet with as many folders in front as tell the sheets apart."""
+    parts = [sheet.absolute().parts for sheet in sheets]
+    for depth in range(1, max(map(len, parts)) + 1):
+        labels = ["/".join(p[-depth:]) for p in parts]
+        if len({label.rpartition(".")[0] for label in labels}) == len(labels):
+            return labels
+    return [sheet.name for sheet in sheets]
+
+
+def _moved(error: InputError, sheet: Path, label: str) -> InputError:
+    """The error with the label of the sheet in front, in place of its bare name."""
+    where = error.where
+    if where.startswith(sheet.name):
+        where = label + where.removeprefix(sheet.name)
+    return InputError(where, error.found, expected=error.expected, remedy=error.remedy)
+
+
+def _labelled(assay: Assay, sheet: Path, label: str) -> Assay:
+    """The assay with recordings whose names and places carry the label of their sheet."""
+    stem = label.rpartition(".")[0]
+    return replace(
+        assay,
+        recordings=tuple(
+            replace(r, name=f"{stem}/{r.name}", where=label + r.where.removeprefix(sheet.name))
+            for r in assay.recordings
+        ),
+    )
+
+
+def _joined(assays: list[Assay], labels: list[str]) -> Assay:
     files: dict[tuple[Any, ...], Recording] = {}
     errors = []
-    for assay in assays:
-        for r in assay.recordings:
-            key = (r.path, r.channel, r.position, r.first_frame, r.last_frame)
-            if key in files:
-                errors.append(
-                    InputError(
-                        r.where,
-                        f"{r.name} is also in {files[key].where}",
-                        expected="every recording once",
-                        remedy="Delete one of the two rows.",
-                    )
+    for r in (r for assay in assays for r in assay.recordings):
+        key = (r.path.resolve(), r.channel, r.position, r.first_frame, r.last_frame)
+        if first := files.get(key):
+            errors.append(
+                InputError(
+                    r.where,
+                    f"{r.path.name} is already the recording of {first.where}",
+                    expected="every recording once",
+                    remedy="Delete one of the two rows.",
                 )
-            files[key] = replace(r, name=f"{assay.name}/{r.name}")
+            )
+        files.setdefault(key, r)
     controls = {r.condition for r in files.values() if r.control}
     if len(controls) > 1:
         errors.append(
             InputError(
-                ", ".join(str(assay.path.name) for assay in assays),
+                " and ".join(labels),
                 f"{len(controls)} conditions are marked as control: {', '.join(sorted(controls))}",
                 expected="one control",
                 remedy="Mark the same condition in every sheet.",

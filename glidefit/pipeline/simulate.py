@@ -3,158 +3,23 @@
 from __future__ import annotations
 
 import dataclasses
-import difflib
-import types
-import typing
-from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from glidefit.errors import InputError, InputErrors
-from glidefit.kernels.synthetic_frames import CameraFaults, SpotOptics, spot_frames
+from glidefit.errors import InputError
+from glidefit.kernels.synthetic_frames import SpotOptics, spot_frames
+from glidefit.pipeline.recipe import Part, Video, read_recipe
 from glidefit.running import folder as run_folder
 from glidefit.running.progress import progress
 from glidefit.steps.simulate import (
     Scenario,
-    ScenarioCondition,
     SimulatedAssay,
     SimulatedRecording,
-    Spread,
     simulate_assay,
 )
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Video:
-    """How the spot videos of a part look; left out, the part gives track tables."""
-
-    signal_to_noise: float = 6.0
-    psf_um: float = 0.15
-    background_photons: float = 20.0
-    read_noise: float = 2.0
-    faults: CameraFaults = dataclasses.field(default_factory=CameraFaults)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Part:
-    """One scenario of a recipe and how it is filmed."""
-
-    scenario: Scenario
-    video: Video | None = None
-    chamber_prefix: str = "c"  # of chamber labels, so that parts filmed on one day stay apart
-
-
-def read_recipe(path: Path) -> tuple[Part, ...]:
-    """Parts of a recipe: TOML with one ``[[part]]`` a scenario.
-
-    Raises
-    ------
-    InputErrors
-        All that is wrong: unknown keys (with the nearest known one), wrong kinds, impossible
-        values.
-    """
-    from glidefit.reading.settings_file import read_settings
-
-    data = read_settings(path)
-    parts = data.pop("part", None)
-    errors = [_unknown(path.name, key, ["part"]) for key in data]
-    if not isinstance(parts, list) or not parts:
-        errors.append(
-            InputError(
-                path.name,
-                "it has no [[part]]",
-                expected="a recipe: one [[part]] for each scenario",
-                remedy="Start from the recipe of the example.",
-            )
-        )
-        raise InputErrors(errors)
-    made = []
-    for i, part in enumerate(parts):
-        where = f"{path.name}, part {i + 1}"
-        video = part.pop("video", None) if isinstance(part, dict) else None
-        prefix = part.pop("chamber_prefix", "c") if isinstance(part, dict) else "c"
-        prefix = _value(str, prefix, f"{where}, chamber_prefix", errors)
-        scenario = _record(Scenario, part, where, errors)
-        filmed = None if video is None else _record(Video, video, f"{where}.video", errors)
-        if scenario is not None:
-            made.append(Part(scenario=scenario, video=filmed, chamber_prefix=prefix))
-    if errors:
-        raise InputErrors(errors)
-    return tuple(made)
-
-
-def _unknown(where: str, key: str, known: list[str]) -> InputError:
-    near = difflib.get_close_matches(key, known, n=1, cutoff=0.5)
-    return InputError(
-        where,
-        f"{key!r} is no key of a recipe",
-        expected=f"one of {', '.join(known)}",
-        remedy=f"Did you mean {near[0]!r}?" if near else "Delete it.",
-    )
-
-
-_NESTED = {
-    "conditions": ScenarioCondition,
-    "speed_spread": Spread,
-    "rotational_diffusion_spread": Spread,
-    "faults": CameraFaults,
-}
-
-
-def _record(kind: type[Any], data: Any, where: str, errors: list[InputError]) -> Any:
-    """A record from a TOML table; what is wrong goes into ``errors``, and None comes back."""
-    if not isinstance(data, Mapping):
-        errors.append(
-            InputError(where, f"{data!r}", expected="a table of keys", remedy="See the example.")
-        )
-        return None
-    hints = typing.get_type_hints(kind)
-    known = [f.name for f in dataclasses.fields(kind)]
-    before = len(errors)
-    values: dict[str, Any] = {}
-    for key, value in data.items():
-        if key not in known:
-            errors.append(_unknown(where, key, known))
-        elif key == "conditions":
-            items = value if isinstance(value, list) else [value]
-            values[key] = tuple(
-                _record(ScenarioCondition, item, f"{where}, condition {n + 1}", errors)
-                for n, item in enumerate(items)
-            )
-        elif key in _NESTED:
-            values[key] = _record(_NESTED[key], value, f"{where}.{key}", errors)
-        else:
-            values[key] = _value(hints[key], value, f"{where}, {key}", errors)
-    if len(errors) > before:
-        return None
-    try:
-        return kind(**values)
-    except (ValueError, TypeError) as error:
-        errors.append(
-            InputError(
-                where, str(error), expected="values that can be simulated", remedy="Correct it."
-            )
-        )
-        return None
-
-
-def _value(hint: Any, value: Any, where: str, errors: list[InputError]) -> Any:
-    kinds = typing.get_args(hint) if isinstance(hint, types.UnionType) else (hint,)
-    if typing.get_origin(hint) is tuple:
-        if isinstance(value, list) and all(isinstance(v, (int, float)) for v in value):
-            return tuple(map(float, value))
-    elif float in kinds and isinstance(value, (int, float)) and not isinstance(value, bool):
-        return float(value)
-    elif type(value) in kinds or value in typing.get_args(hint):  # the latter for a Literal
-        return value
-    wanted = "a number" if float in kinds else getattr(hint, "__name__", str(hint))
-    errors.append(
-        InputError(where, f"the value is {value!r}", expected=wanted, remedy="Correct the recipe.")
-    )
-    return None
 
 
 def simulate(recipe: Path, out: Path, *, seed: int | None = None) -> int:
@@ -170,34 +35,83 @@ def simulate(recipe: Path, out: Path, *, seed: int | None = None) -> int:
     """
     parts = read_recipe(recipe)
     recipe_text = recipe.read_text(encoding="utf-8")  # which may lie in the folder itself
-    assays = [
-        simulate_assay(
-            part.scenario,
-            np.random.default_rng([part.scenario.seed if seed is None else seed, number]),
+    if seed is not None:
+        parts = tuple(
+            dataclasses.replace(p, scenario=dataclasses.replace(p.scenario, seed=seed))
+            for p in parts
         )
+    run_folder.check_output(out, holds=_is_simulation)
+    assays = [
+        simulate_assay(part.scenario, np.random.default_rng([part.scenario.seed, number]))
         for number, part in enumerate(parts)
     ]
-    total = sum(len(assay.recordings) for assay in assays)
-    rows: list[dict[str, str]] = []
-    truth: list[dict[str, str]] = []
+    films = [
+        _Film(part=part, recording=recording)
+        for part, assay in zip(parts, assays, strict=True)
+        for recording in assay.recordings
+    ]
+    names = _file_names(films, recipe.name)
     with (
         run_folder.replaced(out, holds=_is_simulation) as fresh,
-        progress(total, "recordings") as done,
+        progress(len(films), "recordings") as done,
     ):
-        for part, assay in zip(parts, assays, strict=True):
-            for recording in assay.recordings:
-                rows.append(_written(fresh, part, recording))
-                done(recording.name)
-            truth += _truth_rows(part, assay)
+        rows = []
+        for film, name in zip(films, names, strict=True):
+            rows.append(_written(fresh, film, name))
+            done(name)
+        truth = [
+            row
+            for part, assay in zip(parts, assays, strict=True)
+            for row in _truth_rows(part, assay)
+        ]
         _write_lists(fresh, recipe_text, rows, truth)
-    return total
+    return len(films)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Film:
+    """One recording and the part of the recipe that says how it is filmed."""
+
+    part: Part
+    recording: SimulatedRecording
+
+    @property
+    def chamber(self) -> str:
+        return self.part.chamber_prefix + self.recording.chamber.removeprefix("c")
+
+    @property
+    def label(self) -> str:
+        r = self.recording
+        return f"{r.condition}-{r.day}-{self.chamber}-{r.field}"
+
+
+def _file_names(films: list[_Film], recipe: str) -> list[str]:
+    """A name for the file of each recording.
+
+    Raises
+    ------
+    InputError
+        If two parts film the same condition in the same chamber.
+    """
+    from glidefit.writing.slugs import slugs
+
+    labels = [film.label for film in films]
+    if twice := next((label for n, label in enumerate(labels) if label in labels[:n]), None):
+        raise InputError(
+            recipe,
+            f"two parts film {twice!r}",
+            expected="chambers of their own for parts with the same condition",
+            remedy="Give one of the parts another chamber_prefix.",
+        )
+    found = slugs(labels)
+    return [found[label] for label in labels]
 
 
 def _is_simulation(folder: Path) -> bool:
-    """True for a folder that an earlier simulation wrote, with nothing else in it."""
+    """True for a folder that an earlier simulation wrote, or that holds a recipe alone."""
     names = {path.name for path in folder.iterdir()}
-    ours = {"assay.csv", "truth.csv", "recipe.toml", "tracks", "videos"}
-    return "recipe.toml" in names and names <= ours
+    lists = {"assay.csv", "truth.csv", "recipe.toml"}
+    return names == {"recipe.toml"} or lists <= names <= lists | {"tracks", "videos"}
 
 
 def _write_lists(
@@ -215,23 +129,20 @@ def _write_lists(
     )
 
 
-def _written(folder: Path, part: Part, recording: SimulatedRecording) -> dict[str, str]:
+def _written(folder: Path, film: _Film, name: str) -> dict[str, str]:
     """Write one recording and give its row of the sheet."""
     from glidefit.writing.recordings import track_table_text
-    from glidefit.writing.slugs import slug
 
-    scenario = part.scenario
-    chamber = part.chamber_prefix + recording.chamber.removeprefix("c")
-    name = slug(f"{recording.condition}-{recording.day}-{chamber}-{recording.field}")
+    scenario, recording = film.part.scenario, film.recording
     common = {
         "condition": recording.condition,
         "day": recording.day,
-        "chamber": chamber,
+        "chamber": film.chamber,
         "field": recording.field,
         "minutes": f"{recording.minutes:g}",
         "control": "yes" if recording.control else "",
     }
-    if part.video is None:
+    if film.part.video is None:
         run_folder.write_files(folder, {f"tracks/{name}.csv": track_table_text(recording.tracks)})
         return {
             "recording": f"tracks/{name}.csv",
@@ -241,7 +152,7 @@ def _written(folder: Path, part: Part, recording: SimulatedRecording) -> dict[st
             "exposure_s": f"{scenario.exposure_s:.10g}",
         }
     (folder / "videos").mkdir(exist_ok=True)
-    _film(folder / f"videos/{name}.ome.tif", scenario, part.video, recording)
+    _film(folder / f"videos/{name}.ome.tif", scenario, film.part.video, recording)
     return {"recording": f"videos/{name}.ome.tif", **common, "shape": "spot"}
 
 

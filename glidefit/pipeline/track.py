@@ -7,12 +7,17 @@ from pathlib import Path
 
 import numpy as np
 
+import glidefit
 from glidefit.assay import Assay, Recording
 from glidefit.errors import InputError
-from glidefit.pipeline.prepare import Task, Tracked, track
+from glidefit.pipeline.prepare import FIELD_COLUMNS, Task, Tracked, track
 from glidefit.pipeline.run import collect, read_assay
 from glidefit.running import folder as run_folder
-from glidefit.settings import SourcedSettings
+from glidefit.running.checksums import sha256
+from glidefit.settings import SourcedSettings, declarations
+
+MARK = "provenance.json"
+_FORMAT = "glidefit-tracks/1"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,7 +48,10 @@ def track_videos(
             remedy="Use `glidefit run` or `glidefit fit` on the track tables.",
         )
     tracked = collect(track, tasks, workers=workers, title="videos")
-    _write(assay, dict(zip([t.recording.name for t in tasks], tracked, strict=True)), out)
+    files = _files(assay, dict(zip([t.recording.name for t in tasks], tracked, strict=True)))
+    files[MARK] = _provenance(sheets, tasks, settings)
+    with run_folder.replaced(out, holds=_is_ours) as fresh:
+        run_folder.write_files(fresh, files)
     return TrackedVideos(
         sheet=out / "assay.csv",
         n_videos=len(tasks),
@@ -59,10 +67,12 @@ def track_videos(
 def _is_ours(folder: Path) -> bool:
     """True for a folder that an earlier `glidefit track` wrote, with nothing else in it."""
     names = {path.name for path in folder.iterdir()}
-    return "assay.csv" in names and names <= {"assay.csv", "tracks"}
+    # The mark: somebody's own sheet and tables may well have these names.
+    marked = run_folder.is_marked(folder / MARK, _FORMAT)
+    return marked and names <= {MARK, "assay.csv", "tracks"}
 
 
-def _write(assay: Assay, tracked: dict[str, Tracked], out: Path) -> None:
+def _files(assay: Assay, tracked: dict[str, Tracked]) -> dict[str, str]:
     from glidefit.writing.recordings import sheet_text, track_table_text
     from glidefit.writing.slugs import slugs
 
@@ -78,8 +88,32 @@ def _write(assay: Assay, tracked: dict[str, Tracked], out: Path) -> None:
         files[name] = track_table_text(one.tracks)
         rows.append(_row(r, name, one))
     files["assay.csv"] = sheet_text(rows)
-    with run_folder.replaced(out, holds=_is_ours) as fresh:
-        run_folder.write_files(fresh, files)
+    return files
+
+
+def _provenance(sheets: tuple[Path, ...], tasks: list[Task], settings: SourcedSettings) -> str:
+    from glidefit.writing.json_files import provenance_text
+
+    used = settings.values
+    return provenance_text(
+        {
+            "format": _FORMAT,
+            "version": glidefit.__version__,
+            "sheets": [{"file": s.name, "sha256": sha256(s)} for s in sheets],
+            "recordings": [
+                {"recording": t.recording.name, "sha256": sha256(t.recording.path)} for t in tasks
+            ],
+            "settings": {
+                d.key: {
+                    "value": getattr(getattr(used, d.section), d.name),
+                    "unit": d.unit,
+                    "source": settings.source(d.key),
+                }
+                for d in declarations()
+                if d.section in ("detect", "link")
+            },
+        }
+    )
 
 
 def _row(r: Recording, path: str, tracked: Tracked | None = None) -> dict[str, str]:
@@ -91,7 +125,9 @@ def _row(r: Recording, path: str, tracked: Tracked | None = None) -> dict[str, s
         "exposure_s": None if exposure_s is None or np.isnan(exposure_s) else exposure_s,
         "pixel_um": r.pixel_um if tracked is None else None,
         "minutes": r.minutes,
+        **_range_or_field(r, tracked),
     }
+    own = {name: value for name, value in r.numbers.items() if name not in known}
     return {
         "recording": path,
         "condition": r.condition,
@@ -102,6 +138,13 @@ def _row(r: Recording, path: str, tracked: Tracked | None = None) -> dict[str, s
         "control": "yes" if r.control else "",
         "preparation": r.preparation,
         "field": r.field,
-        **{name: f"{value:.10g}" for name, value in r.numbers.items()},
+        **{name: f"{value:.10g}" for name, value in own.items()},
         **r.labels,
     }
+
+
+def _range_or_field(r: Recording, tracked: Tracked | None) -> dict[str, float | None]:
+    """Range of frames of a table that is listed as it is; field of a video, cut already."""
+    if tracked is None:
+        return {"first_frame": r.first_frame, "last_frame": r.last_frame}
+    return dict(zip(FIELD_COLUMNS, tracked.field_um, strict=True))

@@ -14,15 +14,41 @@ from glidefit.errors import OutputError
 
 MARK = "results.json"
 _FORMAT_PREFIX = "glidefit-"
+# What a run writes, by folder. Anything else in a report is somebody's own and not replaced.
+_WRITTEN = {
+    "": ("index.html", MARK, "provenance.json", "*.eln"),
+    "conditions": ("*.html",),
+    "recordings": ("*.html",),
+    "tables": ("*.csv",),
+}
+# Left behind by file browsers in every folder that they show.
+_BROWSER_FILES = (".DS_Store", "Thumbs.db", "desktop.ini")
 
 
 def is_report(folder: Path) -> bool:
-    """True for a folder that an earlier run wrote."""
+    """True for a folder that an earlier run wrote, with nothing else in it."""
+    return is_marked(folder / MARK, _FORMAT_PREFIX) and not _foreign(folder)
+
+
+def is_marked(path: Path, format_prefix: str) -> bool:
+    """True for a JSON file whose ``format`` begins so."""
     try:
-        data = json.loads((folder / MARK).read_text(encoding="utf-8"))
-    except (OSError, ValueError):
+        data = json.loads(path.read_text(encoding="utf-8"))
+    except (OSError, ValueError, RecursionError):
         return False
-    return isinstance(data, dict) and str(data.get("format", "")).startswith(_FORMAT_PREFIX)
+    return isinstance(data, dict) and str(data.get("format", "")).startswith(format_prefix)
+
+
+def _foreign(folder: Path) -> list[str]:
+    """Names in a report that no run writes, sorted."""
+    found = []
+    for path in sorted(folder.rglob("*")):
+        name = path.relative_to(folder)
+        known = _WRITTEN.get(name.parent.as_posix().removeprefix("."), ())
+        is_ours = any(map(path.match, known)) if path.is_file() else name.as_posix() in _WRITTEN
+        if not is_ours and path.name not in _BROWSER_FILES:
+            found.append(name.as_posix())
+    return found
 
 
 def check_output(folder: Path, *, holds: Callable[[Path], bool] = is_report) -> None:
@@ -37,23 +63,40 @@ def check_output(folder: Path, *, holds: Callable[[Path], bool] = is_report) -> 
     Raises
     ------
     OutputError
-        If it is a file, holds something else than an earlier report, or cannot be written.
+        If it is a file, holds something else than an earlier report, holds the current folder,
+        or cannot be written.
     """
-    if folder.exists() and not folder.is_dir():
+    place = Path(os.path.realpath(folder))
+    if place.exists() and not place.is_dir():
+        raise OutputError(f"{folder}: this is a file; expected a folder. Choose another --out.")
+    if place.is_dir() and any(place.iterdir()) and not holds(place):
+        raise OutputError(f"{folder}: {_what_is_there(place)}; nothing was changed. {_ELSEWHERE}")
+    if place in (Path.cwd(), *Path.cwd().parents):
         raise OutputError(
-            f"{folder}: this is a file; expected a folder for the pages. Choose another --out."
+            f"{folder}: this is the folder you are in, or one above it, and it would be replaced; "
+            "nothing was changed. Choose another --out, or go to another folder first."
         )
-    if folder.is_dir() and any(folder.iterdir()) and not holds(folder):
+    parent = next(p for p in place.parents if p.exists())
+    if not parent.is_dir():
         raise OutputError(
-            f"{folder}: the folder is not empty and holds no earlier output of this command of "
-            "glidefit; nothing was changed. Choose another --out, or empty the folder yourself."
+            f"{folder}: {parent} is a file, so no folder can be made in it; nothing was changed. "
+            f"{_ELSEWHERE}"
         )
-    parent = next(p for p in folder.absolute().parents if p.exists())
-    if not os.access(parent, os.W_OK | os.X_OK) or not parent.is_dir():
+    if not os.access(parent, os.W_OK | os.X_OK):
         raise OutputError(
             f"{folder}: {parent} cannot be written to; nothing was changed. Choose another --out, "
             "or have the permissions changed."
         )
+
+
+_ELSEWHERE = "Choose another --out."
+
+
+def _what_is_there(folder: Path) -> str:
+    if is_marked(folder / MARK, _FORMAT_PREFIX) and (foreign := _foreign(folder)):
+        more = f" and {len(foreign) - 1} more" if len(foreign) > 1 else ""
+        return f"the report there also holds {foreign[0]!r}{more}, which no run wrote"
+    return "the folder is not empty and holds no earlier output of this command of glidefit"
 
 
 @contextmanager
@@ -66,24 +109,26 @@ def replaced(folder: Path, *, holds: Callable[[Path], bool] = is_report) -> Iter
         As `check_output`, or if writing fails; the previous report then stays whole.
     """
     check_output(folder, holds=holds)
+    # Of a symbolic link the folder is replaced, not the link.
+    place = Path(os.path.realpath(folder))
     try:
-        folder.absolute().parent.mkdir(parents=True, exist_ok=True)
-        fresh = Path(tempfile.mkdtemp(prefix=f".{folder.name}-", dir=folder.absolute().parent))
+        place.parent.mkdir(parents=True, exist_ok=True)
+        fresh = Path(tempfile.mkdtemp(prefix=f".{place.name}-", dir=place.parent))
     except OSError as error:
-        raise OutputError(f"{folder}: cannot be made ({error.strerror}). {_ELSEWHERE}") from error
+        raise OutputError(f"{folder}: cannot be made ({error.strerror}). {_UNCHANGED}") from error
     try:
         fresh.chmod(0o755)
         yield fresh
-        _swap(fresh, folder)
+        _swap(fresh, place)
     except OSError as error:
         raise OutputError(
-            f"{folder}: cannot be written ({error.strerror}). {_ELSEWHERE}"
+            f"{folder}: cannot be written ({error.strerror or error}). {_UNCHANGED}"
         ) from error
     finally:
         shutil.rmtree(fresh, ignore_errors=True)
 
 
-_ELSEWHERE = "The previous report, if any, is unchanged. Choose another --out."
+_UNCHANGED = f"The previous report, if any, is unchanged. {_ELSEWHERE}"
 
 
 def _swap(fresh: Path, folder: Path) -> None:
@@ -91,13 +136,14 @@ def _swap(fresh: Path, folder: Path) -> None:
         fresh.rename(folder)
         return
     old = fresh.with_name(fresh.name + "-old")
-    folder.rename(old)
     try:
+        folder.rename(old)
         fresh.rename(folder)
-    except OSError:
-        old.rename(folder)
+    except BaseException:  # Ctrl-C between the two renames, too
+        if old.exists() and not folder.exists():
+            old.rename(folder)
         raise
-    shutil.rmtree(old)
+    shutil.rmtree(old, ignore_errors=True)
 
 
 def write_files(folder: Path, files: Mapping[str, str]) -> None:

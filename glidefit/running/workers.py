@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Sequence
+import signal
+import threading
+from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
-from multiprocessing import get_context
+from contextlib import contextmanager
+from multiprocessing import active_children, get_context
 from typing import TypeVar
 
 from glidefit.errors import GlidefitError
@@ -48,11 +51,11 @@ def run_all(
     for variable in _THREADS:  # read when a worker first loads its numerical libraries
         os.environ.setdefault(variable, "1")
     results: dict[int, _Result | GlidefitError] = {}
-    context = get_context("spawn")
-    with ProcessPoolExecutor(min(workers, len(tasks)), mp_context=context) as pool:
-        waiting: dict[Future[_Result | GlidefitError], int] = {
-            pool.submit(_guarded, work, task): i for i, task in enumerate(tasks)
-        }
+    with _pool(min(workers, len(tasks))) as pool:
+        with _interrupts_ignored():
+            waiting: dict[Future[_Result | GlidefitError], int] = {
+                pool.submit(_guarded, work, task): i for i, task in enumerate(tasks)
+            }
         while waiting:
             for future in wait(waiting, return_when=FIRST_COMPLETED).done:
                 i = waiting.pop(future)
@@ -65,6 +68,39 @@ def run_all(
                     ) from error
                 done(name(tasks[i]))
     return [results[i] for i in range(len(tasks))]
+
+
+@contextmanager
+def _pool(workers: int) -> Iterator[ProcessPoolExecutor]:
+    """Worker processes; they are ended at once, not waited for, when the block fails."""
+    others = set(active_children())
+    with ProcessPoolExecutor(
+        workers, mp_context=get_context("spawn"), initializer=_ignore_interrupts
+    ) as pool:
+        try:
+            yield pool
+        except BaseException:
+            for process in set(active_children()) - others:
+                process.terminate()
+            raise
+
+
+@contextmanager
+def _interrupts_ignored() -> Iterator[None]:
+    """Processes started inside inherit that they ignore Ctrl-C: this one alone answers it."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = signal.signal(signal.SIGINT, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, before)
+
+
+def _ignore_interrupts() -> None:
+    # Where it is not inherited, as under Windows.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 def _one(

@@ -231,8 +231,8 @@ def problems(
     out += _headings_disagree(estimates, combined, columns)
     if undecided:
         out.append(
-            f"{undecided} tracks are too short to tell gliding from rest; they are kept and do not "
-            "count in the motile fraction."
+            f"{undecided} {'track is' if undecided == 1 else 'tracks are'} too short to tell "
+            "gliding from rest: kept for the fit, left out of the motile fraction."
         )
     return out
 
@@ -294,9 +294,9 @@ def methods(
         f"Tracks of {counted.recordings} recordings ({counted.chambers} chambers, {counted.days} "
         f"days; frame interval {' and '.join(rates)} s) were analysed with glidefit {version}. "
         f"Of {counted.tracks_seen} tracks {counted.tracks_kept} were kept; set aside: {aside}. "
-        "Speed v and rotational diffusion D_r are those of the active Brownian model in two dimensions, "
-        "with diffusion along the heading, localization error and motion blur, fitted on the "
-        "logarithmic scale to the mean squared displacement of each chamber up to a lag of "
+        "Speed v and rotational diffusion D_r are those of the active Brownian model in two "
+        "dimensions, with diffusion along the heading, localization error and motion blur, fitted "
+        "on the logarithmic scale to the mean squared displacement of each chamber up to a lag of "
         f"{longest_lag_s:.3g} s; pairs of positions were weighted for the edges of the field. "
         "Persistence length is v/D_r (decay of the heading correlation along the path), path "
         "persistence length v/(2 D_r) (worm-like chain in two dimensions). Chamber values were "

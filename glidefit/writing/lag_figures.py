@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 
 Floats = NDArray[np.float64]
 _MOST_POINTS = 40
+_WIDEST_BAND = 0.3  # of the model, in the panel of ratios
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -203,8 +204,8 @@ def _msd_limits(upper: Axes, lower: Axes, curves: Sequence[_Points]) -> None:
     with np.errstate(divide="ignore", invalid="ignore"):
         points = _farthest([c.value / c.model for c in curves])
         bands = _farthest([end / c.model for c in curves for end in (c.low, c.high)])
-    # The band belongs to the picture unless it dwarfs the points.
-    reach = max(1.3 * points, min(1.15 * bands, 6 * points), 0.02)
+    # The band belongs to the picture unless it would flatten every departure of the points.
+    reach = max(1.3 * points, min(1.15 * bands, _WIDEST_BAND), 0.02)
     lower.set_ylim(1 - reach, 1 + reach)
     set_linear_axis(lower.yaxis, ticks=3)
 

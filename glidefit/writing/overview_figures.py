@@ -118,10 +118,14 @@ def _interval(ax: Axes, n: int, estimate: Estimate, *, control: bool) -> None:
         ax.text(left, n, "no value", va="center", fontsize=FONT - 1)
         return
     if math.isfinite(estimate.low) or math.isfinite(estimate.high):
-        low = estimate.low if math.isfinite(estimate.low) else left
-        high = estimate.high if math.isfinite(estimate.high) else right
+        # NaN is an open end and compares as false.
+        low = estimate.low if estimate.low >= left else left
+        high = estimate.high if estimate.high <= right else right
+        for end, inside, shape in ((low, estimate.low, "<"), (high, estimate.high, ">")):
+            if end != inside:
+                ax.plot([end], [n], shape, ms=7, mfc=colour, mec="none", clip_on=False)
         ax.plot(
-            [max(low, left), min(high, right)],
+            [low, high],
             [n, n],
             color=colour,
             lw=3,
@@ -156,6 +160,8 @@ def overview_caption(conditions: Sequence[ConditionResult]) -> str:
     levels = sorted({e.level for e in estimates if math.isfinite(e.low) or math.isfinite(e.high)})
     bars = f"bar: its {percent(levels[0])} interval" if levels else "no interval"
     text = f"Large mark: the condition; {bars}; small dots: chambers."
+    if levels:
+        text += " An arrow head at the end of a bar: the interval goes on."
     if any(c.control for c in conditions):
         text += " Square and dashed line: the control."
     return text

@@ -17,7 +17,7 @@ from glidefit.results import (
     SettingRow,
 )
 from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
-from glidefit.writing.wording import counted, joined, named, visible
+from glidefit.writing.wording import counted, joined, named, sentence, visible
 
 MAIN = (
     "speed_um_s",
@@ -102,7 +102,7 @@ def _estimate(key: str, estimate: Estimate) -> EstimateRow:
         quantity=QUANTITIES[key],
         shown=shown,
         interval=interval,
-        problem=estimate.problem,
+        problem=sentence(estimate.problem),
         absent=shown.value == NONE,
     )
 
@@ -114,7 +114,7 @@ def recording_rows(
     return tuple(
         RecordingRow(
             recording=named(r.recording),
-            kind=f"{r.kind} of {r.shape}s, {counted(r.n_frames, 'frame')}",
+            kind=f"{r.kind} of {r.shape}s, {counted(r.n_frames, 'frame')}{_field(r.field_um)}",
             place=f"{named(r.day)}, chamber {named(r.chamber)}",
             calibration=_calibration(r, settings),
             noise=_with_unit(r.localization_error_um, "µm"),
@@ -141,11 +141,12 @@ def _calibration(recording: RecordingResult, settings: Sequence[SettingRow]) -> 
     if math.isfinite(r.pixel_um):
         pixel = f"pixel {r.pixel_um:g} µm{_source(r.pixel_um_source)}"
     frame = f"frame interval {r.frame_s:g} s{_source(r.frame_s_source)}"
-    width, height = r.field_um
-    field = "field unknown"
-    if width > 0 and height > 0:
-        field = f"field {significant(width)} × {significant(height)} µm"
-    return pixel, frame, _exposure(r, settings), field
+    return pixel, frame, _exposure(r, settings)
+
+
+def _field(size_um: tuple[float, float]) -> str:
+    width, height = size_um
+    return f", {significant(width)} × {significant(height)} µm" if width > 0 and height > 0 else ""
 
 
 def _exposure(recording: RecordingResult, settings: Sequence[SettingRow]) -> str:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import itertools
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -59,14 +60,9 @@ def write_video(
     }
     iterator = iter(frames)
     first = next(iterator)
-
-    def every() -> Iterable[NDArray[np.uint16]]:
-        yield first
-        yield from iterator
-
     with tifffile.TiffWriter(path, ome=True) as writer:
         writer.write(
-            every(),
+            itertools.chain([first], iterator),
             shape=(n_frames, *first.shape),
             dtype=first.dtype,
             compression="zlib",

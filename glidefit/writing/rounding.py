@@ -83,10 +83,12 @@ def probability(p: float) -> str:
 
 
 def percent(part: float, whole: float = 1.0) -> str:
-    """A share in percent, whole numbers from 10 % on; "–" of nothing."""
+    """A share in percent, whole numbers from 10 % on; "–" of nothing, "< 0.1 %" of a little."""
     if not (math.isfinite(part) and whole > 0):
         return NONE
     share = 100 * part / whole
+    if 0 < share < 0.05:
+        return "< 0.1 %"
     return f"{_fixed(share, 0 if share >= 9.95 or share == 0 else 1)} %"
 
 

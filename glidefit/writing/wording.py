@@ -56,6 +56,14 @@ def counted(number: int, noun: str) -> str:
     return f"{number:,} {noun if number == 1 else plural}"
 
 
+def sentence(text: str) -> str:
+    """A remark as a sentence: a capital first, a full stop last."""
+    text = text.strip()
+    if not text:
+        return ""
+    return text[:1].upper() + text[1:] + ("" if text[-1] in ".!?" else ".")
+
+
 def joined(parts: Iterable[str]) -> str:
     """Parts as a list in a sentence: "a, b and c"."""
     *head, last = list(parts) or [""]

@@ -434,7 +434,8 @@ class PageReader(HTMLParser):
 
     def handle_data(self, data: str) -> None:
         inside = self.open[-1] if self.open else ""
-        drawn = "svg" in self.open and inside not in {"title", "desc"}
+        said = inside in {"title", "desc"} and self.open[-2:-1] == ["svg"]
+        drawn = "svg" in self.open and not said
         if inside not in {"style", "script"} and not drawn and data.strip():
             self.words.append(" ".join(data.split()))
 

@@ -52,11 +52,11 @@ def test_calibration_has_its_source(study, recording):
         "pixel 0.1083 µm (sheet)",
         "frame interval 0.2 s (file)",
         "exposure unknown, assumed 0.2 s",
-        "field 80.0 × 80.0 µm",
     )
     table = dataclasses.replace(recording, pixel_um=NAN, field_um=(NAN, NAN))
     assert row_of(table, study).calibration[0] == "positions in µm"
-    assert row_of(table, study).calibration[3] == "field unknown"
+    assert row_of(recording, study).kind == "video of filaments, 80 frames, 80.0 × 80.0 µm"
+    assert row_of(table, study).kind == "video of filaments, 80 frames"
 
 
 def test_calibration_is_said_once_if_it_is_the_same(study, recording):

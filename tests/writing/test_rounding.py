@@ -112,11 +112,8 @@ def test_number_alone_has_three_digits(value, text):
 
 
 def test_percent_and_probability():
-    assert [percent(0.95), percent(0.004), percent(3, 40), percent(1, 0), percent(0, 5)] == [
-        "95 %",
-        "0.4 %",
-        "7.5 %",
-        "–",
-        "0 %",
+    shares = [(0.95, 1), (0.004, 1), (3, 40), (1, 0), (0, 5), (8, 26_672), (1, 1)]
+    assert [percent(part, whole) for part, whole in shares] == [
+        *("95 %", "0.4 %", "7.5 %", "–", "0 %", "< 0.1 %", "100 %")
     ]
     assert [probability(p) for p in (0.0312, 0.5, 1e-9, NAN)] == ["0.031", "0.50", "< 0.0001", "–"]

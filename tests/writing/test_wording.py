@@ -5,7 +5,15 @@ from __future__ import annotations
 from hypothesis import given
 from hypothesis import strategies as st
 
-from glidefit.writing.wording import counted, joined, named, short_names, shortened, visible
+from glidefit.writing.wording import (
+    counted,
+    joined,
+    named,
+    sentence,
+    short_names,
+    shortened,
+    visible,
+)
 
 
 def test_what_cannot_be_shown_is_replaced():
@@ -27,6 +35,14 @@ def test_short_names_are_short_and_distinct(names, width):
     made = short_names(names, width=width)
     assert len(set(made)) == len(names)
     assert all(0 < len(text) <= width for text in made)
+
+
+def test_remark_becomes_a_sentence():
+    assert [sentence("hardly resolved"), sentence("Done."), sentence(" ")] == [
+        "Hardly resolved.",
+        "Done.",
+        "",
+    ]
 
 
 def test_counts_and_lists():

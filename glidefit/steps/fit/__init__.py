@@ -1,0 +1,6 @@
+"""Fit the active-Brownian model to the kept tracks of one condition, chamber by chamber."""
+
+from glidefit.steps.fit.condition import ConditionFit, fit
+from glidefit.steps.fit.evidence_columns import SCALARS, CurveColumns
+
+__all__ = ["SCALARS", "ConditionFit", "CurveColumns", "fit"]

@@ -1,0 +1,124 @@
+"""All chambers of a condition, with one longest lag and one spread of speeds."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from glidefit.evidence import ChamberEvidence, CleanRecording
+from glidefit.kernels import msd_fit
+from glidefit.settings import FitSettings
+from glidefit.steps.fit.chamber import fit_chamber
+from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns, curve_columns
+from glidefit.steps.fit.intervals import FEWEST_FRAMES, Interval, Kept, intervals
+from glidefit.steps.fit.track_speeds import track_speed
+
+Floats = NDArray[np.float64]
+
+# Lags enter the fit only while the path is shorter than this share of the field.
+_FIELD_SHARE = 1 / 3
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ConditionFit:
+    """What a fit leaves, whatever its method: evidence by chamber, curves, track speeds.
+
+    Parameters
+    ----------
+    columns : dict of str: int
+        Column of each scalar quantity in the evidence.
+    chambers : tuple of ChamberEvidence
+        Over the kept tracks.
+    curves : tuple of CurveColumns
+        One for each frame interval.
+    track_speed_um_s : dict of str: (k,) array
+        By recording, of its kept tracks.
+    longest_lag_s : float
+    pooled : (4,) array
+        Parameters of all tracks in one pot, for reading speeds off single lags.
+    model : str
+    problems : tuple of str
+    """
+
+    columns: dict[str, int]
+    chambers: tuple[ChamberEvidence, ...]
+    curves: tuple[CurveColumns, ...]
+    track_speed_um_s: dict[str, Floats]
+    longest_lag_s: float
+    pooled: Floats
+    model: str
+    problems: tuple[str, ...]
+
+
+def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> ConditionFit:
+    """Fit speed, D_r, D∥ and localization error to the recordings of one condition.
+
+    Parameters
+    ----------
+    recordings : sequence of CleanRecording
+        At least one of them with a kept track.
+    settings : FitSettings
+    """
+    kept = [Kept.of(recording) for recording in recordings if recording.clean.kept.any()]
+    parts = intervals(kept)
+    longest, pooled = _longest_lag(parts, settings)
+    columns = curve_columns(parts, longest)
+    start = None
+    if not pooled.problem:
+        start = dict(zip(msd_fit.PARAMETERS, map(float, pooled.values), strict=True))
+    chambers: dict[tuple[str, str], list[Kept]] = {}
+    for one in kept:
+        chambers.setdefault((one.source.day, one.source.chamber), []).append(one)
+    results = [
+        fit_chamber(members, parts, columns, longest_s=longest, start=start)
+        for members in chambers.values()
+    ]
+    variance = _speed_variance([evidence for evidence, _ in results])
+    return ConditionFit(
+        columns=COLUMN,
+        chambers=tuple(_mean_speed(evidence, variance) for evidence, _ in results),
+        curves=columns,
+        track_speed_um_s={
+            one.source.recording: track_speed(one, longest_s=longest, parameters=pooled.values)
+            for one in kept
+        },
+        longest_lag_s=longest,
+        pooled=pooled.values,
+        model="active",
+        problems=tuple(problem for _, problem in results if problem),
+    )
+
+
+def _longest_lag(parts: Sequence[Interval], settings: FitSettings) -> tuple[float, msd_fit.MsdFit]:
+    curves = [part.curve(range(len(part.members))) for part in parts]
+    if settings.longest_lag is not None:
+        wanted = settings.longest_lag
+        return wanted, msd_fit.fit_msd([curve.up_to(wanted) for curve in curves])
+    shortest = float(min(p.lag_s[min(FEWEST_FRAMES, len(p.lag_s)) - 1] for p in parts))
+    most = max(
+        min(p.lag_s[-1], _FIELD_SHARE * p.width_um / p.speed_um_s if p.speed_um_s > 0 else np.inf)
+        for p in parts
+    )
+    return msd_fit.longest_lag(
+        curves, bend=settings.bend, at_least=shortest, at_most=max(float(most), shortest)
+    )
+
+
+def _speed_variance(chambers: Sequence[ChamberEvidence]) -> float:
+    """Mean over chambers of the speed's variance from filament to filament, at least 0."""
+    each = np.array([chamber.values[COLUMN["speed_variance"]] for chamber in chambers])
+    return max(float(np.nanmean(each)), 0.0) if np.any(np.isfinite(each)) else 0.0
+
+
+def _mean_speed(evidence: ChamberEvidence, variance: float) -> ChamberEvidence:
+    """The MSD knows √⟨v²⟩; the mean speed is a little less where filaments differ."""
+    values, influence = evidence.values.copy(), evidence.influence.copy()
+    column = COLUMN["speed"]
+    square = values[column] ** 2 - variance
+    if square > 0:  # false for NaN too
+        influence[:, column] *= values[column] / np.sqrt(square)
+        values[column] = np.sqrt(square)
+    return replace(evidence, values=values, influence=influence)
