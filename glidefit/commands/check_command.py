@@ -10,6 +10,8 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from glidefit.commands import options
+from glidefit.commands.wording import counted, printable, told
+from glidefit.errors import InputErrors
 
 if TYPE_CHECKING:
     from glidefit.pipeline.check import Look
@@ -33,16 +35,20 @@ def command(sheet: Path, workers: int | None, settings_file: Path | None, **give
         workers=options.count_workers(workers),
     )
     for look in done.looks:
-        click.echo(_paragraph(look))
+        click.echo(printable(_paragraph(look)))
     for note in done.notes:
-        click.echo(f"Note: {note}.")
-    for error in done.errors:
-        click.echo(f"Error: {error}", err=True)
-    n, wrong = len(done.assay.recordings), len(done.errors)
-    if wrong:
-        click.echo(f"{wrong} of {n} recordings cannot be used as they are.", err=True)
+        click.echo(printable(f"Note: {note}."))
+    recordings = counted(len(done.assay.recordings), "recording")
+    if done.errors:
+        wrong = len(done.assay.recordings) - len(done.looks)
+        click.echo(told(InputErrors(done.errors)), err=True)
+        click.echo(f"{wrong} of {recordings} cannot be used as {_BE[wrong > 1]}.", err=True)
         sys.exit(3)
-    click.echo(f"{n} recordings of {len(done.assay.conditions)} conditions can be run.")
+    conditions = counted(len(done.assay.conditions), "condition")
+    click.echo(f"{recordings} of {conditions} can be run.")
+
+
+_BE = "it is", "they are"
 
 
 def _paragraph(look: Look) -> str:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import importlib
+import io
 import sys
 
 import click
@@ -62,8 +63,12 @@ def cli() -> None:
 
 def main() -> None:
     """Entry point: errors become one clear text and an exit code, never a traceback."""
+    from glidefit.commands.wording import told
     from glidefit.errors import GlidefitError
 
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")  # a terminal that has no µ shows ?
     try:
         cli(prog_name="glidefit", standalone_mode=False)
     except click.exceptions.Abort:
@@ -75,7 +80,7 @@ def main() -> None:
     except click.exceptions.Exit as stop:
         sys.exit(stop.exit_code)
     except GlidefitError as error:
-        click.echo(_told(str(error)), err=True)
+        click.echo(told(error), err=True)
         sys.exit(error.exit_code)
     except Exception as error:  # noqa: BLE001  (the last resort: a fault of ours is told plainly)
         click.echo(_own_fault(error), err=True)
@@ -86,18 +91,20 @@ def _own_fault(error: Exception) -> str:
     import tempfile
     import traceback
 
-    with tempfile.NamedTemporaryFile(
-        "w", prefix="glidefit-fault-", suffix=".txt", delete=False, encoding="utf-8"
-    ) as file:
-        file.write("".join(traceback.format_exception(error)))
+    from glidefit.commands.wording import printable
+
+    details = "".join(traceback.format_exception(error))
+    said = printable(" ".join(f"{type(error).__name__}: {error}".split()))
+    try:
+        with tempfile.NamedTemporaryFile(
+            "w", prefix="glidefit-fault-", suffix=".txt", delete=False, encoding="utf-8"
+        ) as file:
+            file.write(details.encode(errors="replace").decode())
+    except OSError as no_room:
+        report = f"Please report it; the details could not be written ({no_room.strerror})."
+    else:
+        report = f"Please report it with {file.name}, which says where it happened."
     return (
-        f"Error: glidefit met a fault of its own ({type(error).__name__}: {error}). Earlier output "
-        f"is unchanged. Please report it with {file.name}, which says where it happened."
+        f"Error: glidefit met a fault of its own ({said:.300}). Earlier output is unchanged. "
+        f"{report}"
     )
-
-
-def _told(text: str) -> str:
-    lines = text.splitlines()
-    if len(lines) == 1:
-        return f"Error: {text}"
-    return "\n".join([f"{len(lines)} errors:", *(f"- {line}" for line in lines)])

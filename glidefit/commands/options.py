@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
 
+from glidefit.commands.wording import counted
 from glidefit.settings import Declaration, SourcedSettings, declarations, resolve
 
 if TYPE_CHECKING:
@@ -17,6 +18,16 @@ if TYPE_CHECKING:
 
 _Command = TypeVar("_Command", bound=Callable[..., Any])
 
+
+class _Number(click.types.FloatParamType):
+    name = "number"  # in "'abc' is not a valid number."
+
+
+class _Count(click.types.IntParamType):
+    name = "whole number"
+
+
+_KINDS = {float: _Number(), int: _Count(), str: click.STRING}
 SHEET = click.Path(path_type=Path)
 
 
@@ -39,7 +50,7 @@ def with_settings(*sections: str) -> Callable[[_Command], _Command]:
 
 
 def _option(d: Declaration) -> Callable[[_Command], _Command]:
-    kind: Any = click.Choice(d.choices) if d.choices else d.kind
+    kind: Any = click.Choice(d.choices) if d.choices else _KINDS[d.kind]
     unit = f" [{d.unit}]" if d.unit else ""
     default = "chosen from the data" if d.default is None else d.default
     metavar = None if d.choices else {float: "NUMBER", int: "COUNT", str: "NAME"}[d.kind]
@@ -109,7 +120,5 @@ def last_line(done: Done, page: str) -> str:
         done.problems, f"{done.problems} problems wait"
     )
     ending = "." if done.problems == 0 else " to be read."
-    return (
-        f"{done.out / page}: {done.tracks_kept} tracks kept, {done.tracks_set_aside} set aside; "
-        f"{wait}{ending}"
-    )
+    kept = counted(done.tracks_kept, "track")
+    return f"{done.out / page}: {kept} kept, {done.tracks_set_aside} set aside; {wait}{ending}"

@@ -6,6 +6,8 @@ from pathlib import Path
 
 import click
 
+from glidefit.commands.wording import counted
+
 
 @click.command("report")
 @click.argument("run", type=click.Path(path_type=Path), metavar="RUN")
@@ -18,5 +20,6 @@ def command(run: Path) -> None:
     from glidefit.pipeline.report import report
 
     result = report(run)
+    conditions = counted(len(result.conditions), "condition")
     folder = run if run.is_dir() else run.parent
-    click.echo(f"{folder / 'index.html'}: pages of {len(result.conditions)} conditions.")
+    click.echo(f"{folder / 'index.html'}: pages of {conditions}.")

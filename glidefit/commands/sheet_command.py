@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import shlex
 from pathlib import Path
 
 import click
+
+from glidefit.commands.wording import counted
 
 
 @click.command("sheet")
@@ -33,4 +36,6 @@ def command(folder: Path, names: str | None, out: Path | None) -> None:
         {name for row in rows for name in ("condition", "day", "chamber") if not row[name]}
     )
     rest = f" Fill in {', '.join(empty)}." if empty else ""
-    click.echo(f"{path}: {len(rows)} recordings.{rest} Then run `glidefit check {path}`.")
+    recordings = counted(len(rows), "recording")
+    check = f"glidefit check {shlex.quote(str(path))}"
+    click.echo(f"{path}: {recordings}.{rest} Then run `{check}`.")

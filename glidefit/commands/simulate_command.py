@@ -6,6 +6,8 @@ from pathlib import Path
 
 import click
 
+from glidefit.commands.wording import counted
+
 
 @click.command("simulate")
 @click.argument("recipe", type=click.Path(path_type=Path), metavar="RECIPE")
@@ -31,4 +33,5 @@ def command(recipe: Path, out: Path, seed: int | None) -> None:
     from glidefit.pipeline.simulate import simulate
 
     n = simulate(recipe, out, seed=seed)
-    click.echo(f"{out / 'assay.csv'}: {n} recordings; the truth is in {out / 'truth.csv'}.")
+    recordings = counted(n, "recording")
+    click.echo(f"{out / 'assay.csv'}: {recordings}; the truth is in {out / 'truth.csv'}.")

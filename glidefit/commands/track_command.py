@@ -8,6 +8,7 @@ from typing import Any
 import click
 
 from glidefit.commands import options
+from glidefit.commands.wording import counted
 
 
 @click.command("track")
@@ -42,4 +43,6 @@ def command(
     )
     for note in done.notes:
         click.echo(f"Note: {note}", err=True)
-    click.echo(f"{done.sheet}: {done.n_tracks} tracks from {done.n_videos} videos.")
+    tracks = counted(done.n_tracks, "track")
+    videos = counted(done.n_videos, "video")
+    click.echo(f"{done.sheet}: {tracks} from {videos}.")

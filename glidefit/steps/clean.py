@@ -31,6 +31,9 @@ _DRIFT_SHARE = 0.5
 # Drift is slower than this share of the typical gliding speed, and resting objects agree in
 # velocity to this share of it.
 _DRIFT_FASTEST, _DRIFT_SLACK = 0.3, 0.01
+# Where drift could not be measured, what moves slower than this share of the typical speed
+# cannot be told from an object at rest on a drifting stage.
+_UNSEEN_DRIFT = 0.03
 # A short track at rest could be a glider if even half the typical speed would go unnoticed.
 _UNNOTICED_SHARE = 0.5
 
@@ -69,6 +72,13 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     noticed = motion.smallest_noticed_speed(
         tracks.n_positions.astype(np.float64), duration, noise=noise, multiple=settings.stuck
     )
+    if not drift.measured and np.isfinite(typical):
+        slowest = _UNSEEN_DRIFT * typical
+        creeping = measured.extent_um <= slowest * duration + _STEP_NOISE * noise
+        # Of a short track so small an extent says nothing.
+        creeping &= typical * duration > 2 * (slowest * duration + _STEP_NOISE * noise)
+        reason[(reason == KEPT) & creeping] = STUCK
+        noticed = np.maximum(noticed, slowest)
     undecided = (reason == STUCK) & (noticed > _UNNOTICED_SHARE * typical)
     reason = np.where(undecided, KEPT, reason)
     return CleanTracks(

@@ -226,7 +226,7 @@ def log_ticks(low: float, high: float) -> list[float]:
         if len(inside) >= 3:
             break
     else:
-        inside = [t for t in MaxNLocator(5).tick_values(low, high).tolist() if low <= t <= high]
+        inside = [float(t) for t in MaxNLocator(5).tick_values(low, high) if low <= t <= high]
     every = -(-len(inside) // 6)
     return inside[::every]
 

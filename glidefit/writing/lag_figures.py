@@ -160,7 +160,7 @@ def _measured(ax: Axes, points: _Points, n: int, *, scale: Floats) -> None:
             mfc=face,
             mec=hue(n),
             mew=1,
-            zorder=3,
+            zorder=4,
         )
 
 
@@ -177,7 +177,7 @@ def _model(ax: Axes, points: _Points) -> None:
             lw=0,
         )
     if known.any():
-        ax.plot(points.lag[known], points.model[known], color=INK, lw=1.5, zorder=4)
+        ax.plot(points.lag[known], points.model[known], color=INK, lw=1.5, zorder=3)
 
 
 def _finite(parts: Sequence[Floats]) -> Floats:

@@ -123,7 +123,7 @@ def _interval(ax: Axes, n: int, estimate: Estimate, *, control: bool) -> None:
         high = estimate.high if estimate.high <= right else right
         for end, inside, shape in ((low, estimate.low, "<"), (high, estimate.high, ">")):
             if end != inside:
-                ax.plot([end], [n], shape, ms=7, mfc=colour, mec="none", clip_on=False)
+                ax.plot([end], [n], shape, ms=7, mfc=colour, mec=colour, clip_on=False)
         ax.plot(
             [low, high],
             [n, n],

@@ -35,8 +35,13 @@ def browser():
 
 
 @pytest.fixture(scope="module")
-def pages(study, hostile, emptied, tmp_path_factory):
-    """Files of pages: usual, hostile, with nothing left."""
+def pages(study, hostile, emptied, invented, sized, tmp_path_factory):
+    """Files of pages: usual, hostile, with nothing left, with much of everything."""
+    much = invented(
+        [f"construct {n} with a name that goes on to {n} mM" for n in range(30)],
+        size=sized(days=8, chambers=4, recordings=1, tracks=5),
+        control=None,
+    )
     folder = tmp_path_factory.mktemp("pages")
     texts = {
         "condition": condition_page(study, study.conditions[0]),
@@ -44,6 +49,8 @@ def pages(study, hostile, emptied, tmp_path_factory):
         "hostile": condition_page(hostile, hostile.conditions[0]),
         "hostile-index": index_page(hostile),
         "nothing": condition_page(study, emptied(study.conditions[0])),
+        "much": condition_page(much, much.conditions[0]),
+        "much-index": index_page(much),
     }
     for name, text in texts.items():
         (folder / f"{name}.html").write_text(text, encoding="utf-8")
@@ -71,7 +78,7 @@ def watched(browser):
     context.close()
 
 
-NAMES = ["condition", "index", "hostile", "hostile-index", "nothing"]
+NAMES = ["condition", "index", "hostile", "hostile-index", "nothing", "much", "much-index"]
 
 
 @pytest.mark.parametrize("name", NAMES)

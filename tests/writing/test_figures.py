@@ -196,6 +196,17 @@ def test_condition_without_value_keeps_its_row_in_the_overview(study, emptied):
     assert all("2  kinesin, R203A</text>" in drawing.svg for drawing in drawings)
 
 
+def test_interval_that_goes_on_ends_in_an_arrow_head(study):
+    def heads(condition):
+        return overview([condition])[0].svg.count("</defs>")
+
+    closed = study.conditions[0]
+    assert heads(replaced(closed, "speed_um_s", high=NAN)) == heads(closed) + 1
+    assert heads(replaced(closed, "speed_um_s", low=-100.0, high=100.0)) == heads(closed) + 2
+    bare = overview([replaced(closed, "speed_um_s", low=NAN, high=NAN)])[0].svg
+    assert bare.count("</defs>") == heads(closed)
+
+
 def test_overview_says_what_its_marks_are(study):
     text = overview_caption(study.conditions)
     assert "its 95 % interval" in text
