@@ -118,8 +118,9 @@ class Combined:
         Units of that level that can tell the column.
     covers : str
         "days", "chambers", or "" where nothing repeats.
-    level_error : dict of str: (p,) array
-        Standard error of ``value`` brought by each level alone; NaN where it does not repeat.
+    level_error : dict of str: (s,) array
+        Standard error of the first s values brought by each level alone; NaN where it does not
+        repeat.
     level_units : dict of str: int
     """
 

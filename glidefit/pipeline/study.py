@@ -100,7 +100,9 @@ def condition_numbers(
     fitted = fit.fit(recordings, settings=settings.fit)
     gliding = motility.motility(recordings)
     interval = settings.interval
-    combined = uncertainty.combine(fitted.chambers, settings=interval, rng=rng)
+    combined = uncertainty.combine(
+        fitted.chambers, settings=interval, rng=rng, n_scalars=len(fitted.columns)
+    )
     motile = uncertainty.combine(gliding, settings=interval, rng=rng)
     known = uncertainty.estimates(combined, fitted.columns, settings=interval)
     known |= uncertainty.estimates(motile, motility.COLUMNS, settings=interval)

@@ -155,9 +155,10 @@ def _drift(
     together = _resting_objects(tracks, noise, settings)
     n_objects = int(together.sum())
     if n_objects < settings.drift_objects:
-        found = "none is" if n_objects == 0 else f"{n_objects} are"
-        note = f"not measured: {found} at rest for half the recording, "
-        return still, _no_drift(n_objects, note + f"{settings.drift_objects} are needed")
+        note = (
+            f"not measured: fewer than {settings.drift_objects} objects rest for half the recording"
+        )
+        return still, _no_drift(n_objects, note)
     rest = tracks.select(together)
     raw = [
         drifting.common_displacement(rest.frame, rest.index, x, n_frames)

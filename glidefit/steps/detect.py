@@ -245,7 +245,7 @@ def _trusted(fitted: FittedSpots, threshold: float, shape: tuple[int, ...]) -> M
     """Spots inside the frame that stand out also as they were fitted, and are no single pixel."""
     inside = np.abs(fitted.x_px - (shape[1] - 1) / 2) <= shape[1] / 2
     inside &= np.abs(fitted.y_px - (shape[0] - 1) / 2) <= shape[0] / 2
-    bright = fitted.amplitude > threshold * fitted.amplitude_sd
+    bright = fitted.amplitude > 0.8 * threshold * fitted.amplitude_sd
     return inside & bright & ~(fitted.spike > _SPIKE)
 
 

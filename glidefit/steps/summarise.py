@@ -207,7 +207,7 @@ def generalises(condition: str, combined: Combined, preparations: Sequence[str])
         return f"The intervals cover other days like these {days}."
     if combined.covers == "chambers":
         return (
-            f"All {n_chambers} chambers are of one day: the intervals cover other chambers of that "
+            f"The {n_chambers} chambers are of one day: the intervals cover other chambers of that "
             "day, not other days. Film on further days to say more."
         )
     return (

@@ -24,6 +24,7 @@ def combine(
     *,
     settings: IntervalSettings,
     rng: np.random.Generator,
+    n_scalars: int | None = None,
 ) -> Combined:
     """Combine chambers to days and days to the condition, with resamples level by level.
 
@@ -37,6 +38,8 @@ def combine(
         At least one; with the same columns.
     settings : IntervalSettings
     rng : Generator
+    n_scalars : int, optional
+        Only the first so many columns get a ``level_error``; the rest are points of curves.
     """
     values = np.array([chamber.values for chamber in chambers])
     days = list(dict.fromkeys(chamber.day for chamber in chambers))
@@ -47,11 +50,12 @@ def combine(
         covers = ""
     n = settings.resamples
     draws = _drawn_means(top, n_resamples=n, rng=rng)
+    scalars = slice(0, n_scalars)
     errors = {
-        "days": _spread(_drawn_means(by_day, n_resamples=n, rng=rng)),
-        "chambers": _chamber_error(values, day_of_chamber, n_resamples=n, rng=rng),
-        "recordings": _inner_error(chambers, day_of_chamber, "recordings", n, rng),
-        "tracks": _inner_error(chambers, day_of_chamber, "tracks", n, rng),
+        "days": _spread(_drawn_means(by_day[:, scalars], n_resamples=n, rng=rng)),
+        "chambers": _chamber_error(values[:, scalars], day_of_chamber, n_resamples=n, rng=rng),
+        "recordings": _inner_error(chambers, day_of_chamber, scalars, "recordings", n, rng),
+        "tracks": _inner_error(chambers, day_of_chamber, scalars, "tracks", n, rng),
     }
     return Combined(
         value=_mean(by_day),
@@ -120,6 +124,7 @@ def _chamber_error(
 def _inner_error(
     chambers: Sequence[ChamberEvidence],
     day_of_chamber: Ints,
+    columns: slice,
     level: str,
     n_resamples: int,
     rng: np.random.Generator,
@@ -127,7 +132,7 @@ def _inner_error(
     """Error of the condition's mean from drawing recordings, or tracks, within each chamber."""
     variance = []
     for chamber in chambers:
-        influence, parent = chamber.influence, chamber.recording_of_track
+        influence, parent = chamber.influence[:, columns], chamber.recording_of_track
         if level == "recordings":
             fields = np.unique(parent)
             influence = np.array([influence[parent == f].sum(axis=0) for f in fields])
@@ -141,7 +146,7 @@ def _inner_error(
         sums = resampling.resampled_sums(parent, influence, n_resamples=n_resamples, rng=rng)
         centre = np.array([influence[parent == p].sum(axis=0) for p in range(len(size))])
         moved = ((sums - centre) * stretch).sum(axis=1)
-        known = np.isfinite(chamber.values)
+        known = np.isfinite(chamber.values[columns])
         variance.append(np.where(known, moved.var(axis=0), np.nan))
     by_chamber = np.array(variance)
     days = np.unique(day_of_chamber)

@@ -41,7 +41,7 @@ def decimals(uncertainty: float) -> int:
 def rounded(value: float, low: float, high: float) -> Rounded:
     """A value and the ends of its interval, rounded to two digits of half the interval.
 
-    An interval open on one side is judged by its closed side. Without any interval three
+    A lopsided interval, or one open on a side, is judged by its shorter arm. Without any interval three
     digits are given. A zero that ends all the numbers is left out.
 
     Parameters
@@ -103,9 +103,13 @@ def _digits_place(value: float, *, digits: int) -> int:
 
 def _places(value: float, low: float, high: float) -> int:
     width = (high - low) / 2
-    if math.isnan(width):
-        closed = high if math.isnan(low) else low
-        width = abs(value - closed)
+    arms = [arm for arm in (value - low, high - value) if arm > 0]
+    if arms and not min(arms) > 0.2 * width:
+        # A lopsided interval, or one open on a side: its shorter arm says what is known best,
+        # and an end keeps two digits of its own.
+        width = min(arms)
+        ends = [abs(x) for x in (low, high) if x != 0 and not math.isnan(x)]
+        return max(decimals(width), *(_digits_place(end, digits=2) for end in ends))
     if width > 0:
         return decimals(width)
     return max(_digits_place(x, digits=3) for x in (value, low, high) if not math.isnan(x))

@@ -183,7 +183,7 @@ def test_a_clean_condition_has_no_problem_of_fit(result):
         (
             "chambers",
             [],
-            "All 4 chambers are of one day: the intervals cover other chambers of that day, not "
+            "The 4 chambers are of one day: the intervals cover other chambers of that day, not "
             "other days. Film on further days to say more.",
         ),
         (

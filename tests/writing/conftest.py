@@ -5,9 +5,7 @@ from __future__ import annotations
 import dataclasses
 import itertools
 import math
-import re
 from collections.abc import Callable, Sequence
-from html.parser import HTMLParser
 
 import numpy as np
 import pytest
@@ -397,72 +395,6 @@ def emptied() -> Callable[[ConditionResult], ConditionResult]:
 def sized() -> type[Size]:
     """How much an invented condition holds."""
     return Size
-
-
-class PageReader(HTMLParser):
-    """Reads a page strictly: every tag closed where it belongs, every attribute quoted."""
-
-    VOID = frozenset({"meta", "br", "link", "img", "hr", "input", "wbr"})
-    QUOTED = re.compile(r"<[\w:-]+(\s+[\w:-]+=(\"[^\"<>]*\"|'[^'<>]*'))*\s*/?>")
-
-    def __init__(self) -> None:
-        super().__init__(convert_charrefs=True)
-        self.open: list[str] = []
-        self.elements: list[tuple[str, dict[str, str]]] = []
-        self.faults: list[str] = []
-        self.words: list[str] = []
-
-    def handle_starttag(self, tag: str, attrs: list) -> None:
-        self._element(tag, attrs)
-        if tag not in self.VOID:
-            self.open.append(tag)
-
-    def handle_startendtag(self, tag: str, attrs: list) -> None:
-        self._element(tag, attrs)
-
-    def _element(self, tag: str, attrs: list) -> None:
-        source = self.get_starttag_text() or ""
-        if not self.QUOTED.fullmatch(source):
-            self.faults.append(f"not quoted: {source}")
-        if len({name for name, _ in attrs}) != len(attrs):
-            self.faults.append(f"attribute twice: {source}")
-        self.elements.append((tag, dict(attrs)))
-
-    def handle_endtag(self, tag: str) -> None:
-        if not self.open or self.open.pop() != tag:
-            self.faults.append(f"</{tag}> closes nothing")
-
-    def handle_data(self, data: str) -> None:
-        inside = self.open[-1] if self.open else ""
-        said = inside in {"title", "desc"} and self.open[-2:-1] == ["svg"]
-        drawn = "svg" in self.open and not said
-        if inside not in {"style", "script"} and not drawn and data.strip():
-            self.words.append(" ".join(data.split()))
-
-    @property
-    def ids(self) -> list[str]:
-        """Every id of the page."""
-        return [attrs["id"] for _, attrs in self.elements if "id" in attrs]
-
-    def of(self, tag: str) -> list[dict[str, str]]:
-        """Attributes of every element with this tag."""
-        return [attrs for name, attrs in self.elements if name == tag]
-
-
-@pytest.fixture(scope="session")
-def read_page() -> Callable[[str], PageReader]:
-    """Read a page and fail if it is not well formed."""
-
-    def read(text: str) -> PageReader:
-        reader = PageReader()
-        reader.feed(text)
-        reader.close()
-        assert reader.faults == []
-        assert reader.open == []
-        assert len(set(reader.ids)) == len(reader.ids)
-        return reader
-
-    return read
 
 
 HOSTILE = (

@@ -7,6 +7,7 @@ import dataclasses
 import hashlib
 import math
 import re
+from html.parser import HTMLParser
 from pathlib import Path
 
 import pytest
@@ -32,6 +33,72 @@ SECTIONS = [
     "Cautions",
     "Provenance",
 ]
+
+
+class PageReader(HTMLParser):
+    """Reads a page strictly: every tag closed where it belongs, every attribute quoted."""
+
+    VOID = frozenset({"meta", "br", "link", "img", "hr", "input", "wbr"})
+    QUOTED = re.compile(r"<[\w:-]+(\s+[\w:-]+=(\"[^\"<>]*\"|'[^'<>]*'))*\s*/?>")
+
+    def __init__(self):
+        super().__init__(convert_charrefs=True)
+        self.open = []
+        self.elements = []
+        self.faults = []
+        self.words = []
+
+    def handle_starttag(self, tag, attrs):
+        self._element(tag, attrs)
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self._element(tag, attrs)
+
+    def _element(self, tag, attrs):
+        source = self.get_starttag_text() or ""
+        if not self.QUOTED.fullmatch(source):
+            self.faults.append(f"not quoted: {source}")
+        if len({name for name, _ in attrs}) != len(attrs):
+            self.faults.append(f"attribute twice: {source}")
+        self.elements.append((tag, dict(attrs)))
+
+    def handle_endtag(self, tag):
+        if not self.open or self.open.pop() != tag:
+            self.faults.append(f"</{tag}> closes nothing")
+
+    def handle_data(self, data):
+        inside = self.open[-1] if self.open else ""
+        said = inside in {"title", "desc"} and self.open[-2:-1] == ["svg"]
+        drawn = "svg" in self.open and not said
+        if inside not in {"style", "script"} and not drawn and data.strip():
+            self.words.append(" ".join(data.split()))
+
+    @property
+    def ids(self):
+        """Every id of the page."""
+        return [attrs["id"] for _, attrs in self.elements if "id" in attrs]
+
+    def of(self, tag) -> list[dict[str, str]]:
+        """Attributes of every element with this tag."""
+        return [attrs for name, attrs in self.elements if name == tag]
+
+
+@pytest.fixture(scope="module")
+def read_page():
+    """Read a page and fail if it is not well formed."""
+
+    def read(text):
+        reader = PageReader()
+        reader.feed(text)
+        reader.close()
+        assert reader.faults == []
+        assert reader.open == []
+        assert len(set(reader.ids)) == len(reader.ids)
+        return reader
+
+    return read
 
 
 @pytest.fixture(scope="module")
