@@ -21,8 +21,8 @@ Mask = NDArray[np.bool_]
 _SPOT_HEIGHT = 4.0
 # Rounding to whole counts adds this variance.
 _ROUNDING_VARIANCE = 1 / 12
-# Looks at a frame among which a threshold of 5 lets through one false spot in 100 frames.
-_REFERENCE_LOOKS = 537.0
+# Looks among which Gaussian noise rises above 5 in one of about 180 frames.
+_REFERENCE_LOOKS = 300.0
 
 
 class FilteredFrame(NamedTuple):
@@ -92,8 +92,8 @@ def detection_height(threshold: float, *, looks: float, skewness: float = 0.0) -
     """Significance that a spot must reach so that ``threshold`` means the same in every frame.
 
     Noise alone rises above u in ``looks u exp(-u²/2)`` places of a frame. In a larger frame u is
-    raised, ``u² = threshold² + 2 ln(looks / 537)``, to let through as few false spots a frame as
-    ``threshold`` does in 537 looks: 0.7 at 4, 0.01 at 5, 0.00005 at 6. Photon noise in the dark
+    raised, ``u² = threshold² + 2 ln(looks / 300)``, to let through as few false spots a frame as
+    ``threshold`` does in 300 looks: 0.4 at 4, 0.006 at 5, 0.00003 at 6. Photon noise in the dark
     reaches higher than Gaussian noise: with its skewness γ a gamma distribution is as rarely above
     ``(2/γ) ((1 + γu/6 - γ²/36)³ - 1)``.
 

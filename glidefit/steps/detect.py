@@ -29,6 +29,8 @@ Mask = NDArray[np.bool_]
 _DIAMETERS_PER_WIDTH = 6.0
 # A fainter spot so close to a brighter one cannot be told from the brighter one's skirt.
 _FAINTEST_NEIGHBOUR = 0.1
+# Of the threshold, for the fitted amplitude: its error is larger, as it has its own background.
+_FITTED_SHARE = 0.8
 # A pixel that stands above the fit by more than its amplitude is hot and no spot.
 _SPIKE = 1.0
 # Steps of the integer image in which trackpy looks for maxima, per noise.
@@ -245,7 +247,7 @@ def _trusted(fitted: FittedSpots, threshold: float, shape: tuple[int, ...]) -> M
     """Spots inside the frame that stand out also as they were fitted, and are no single pixel."""
     inside = np.abs(fitted.x_px - (shape[1] - 1) / 2) <= shape[1] / 2
     inside &= np.abs(fitted.y_px - (shape[0] - 1) / 2) <= shape[0] / 2
-    bright = fitted.amplitude > 0.8 * threshold * fitted.amplitude_sd
+    bright = fitted.amplitude > _FITTED_SHARE * threshold * fitted.amplitude_sd
     return inside & bright & ~(fitted.spike > _SPIKE)
 
 

@@ -41,8 +41,8 @@ def decimals(uncertainty: float) -> int:
 def rounded(value: float, low: float, high: float) -> Rounded:
     """A value and the ends of its interval, rounded to two digits of half the interval.
 
-    A lopsided interval, or one open on a side, is judged by its shorter arm. Without any interval three
-    digits are given. A zero that ends all the numbers is left out.
+    A lopsided interval, or one open on a side, is judged by its shorter arm. Without any interval
+    three digits are given. A zero that ends all the numbers is left out.
 
     Parameters
     ----------

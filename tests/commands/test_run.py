@@ -125,7 +125,9 @@ def test_order_of_rows_does_not_matter(desk, study, first_run):
 def test_other_conditions_of_the_sheet_do_not_matter(desk, study, first_run):
     path = desk.folder / study / "tables.csv"
     rows = path.read_text(encoding="utf-8").splitlines()
-    path.write_text("\n".join(r for r in rows if "control," not in r or r is rows[0]) + "\n", "utf-8")
+    path.write_text(
+        "\n".join(r for r in rows if "control," not in r or r is rows[0]) + "\n", "utf-8"
+    )
     desk.glidefit("fit", f"{study}/tables.csv")
     one, two = numbers(json.loads(first_run["files"]["results.json"])), numbers(results(desk))
     assert {condition for condition, _ in two} == {"mutant"}
@@ -154,9 +156,7 @@ def test_several_sheets_are_one_study(desk, study, first_run):
     for day in ("2026-03-02", "2026-03-03"):
         text = "\n".join([head, *(row for row in rows if f",{day}," in row)]) + "\n"
         desk.write(f"{study}/{day}/assay.csv", text.replace("tracks/", "../tracks/"))
-    said = desk.glidefit(
-        "fit", f"{study}/2026-03-02/assay.csv", f"{study}/2026-03-03/assay.csv"
-    )
+    said = desk.glidefit("fit", f"{study}/2026-03-02/assay.csv", f"{study}/2026-03-03/assay.csv")
     assert (said.code, said.err) == (0, "")
     assert said.out.startswith("reports/assay-and-1-more/results.json: ")
     together = results(desk, "reports/assay-and-1-more")
@@ -247,7 +247,9 @@ def test_hostile_names_stay_text_inside_the_folder(desk):
         text = f'"{name}"'
         rows.append(f"{n}.csv,{text},{text},{text},0.5,0.1,,{text},{text},{text}")
     # The track named by a formula is too short, so it is set aside and listed by name.
-    said = desk.glidefit("run", desk.sheet(*rows, header=header, name="x<blink>y.csv"), "--out", "out")
+    said = desk.glidefit(
+        "run", desk.sheet(*rows, header=header, name="x<blink>y.csv"), "--out", "out"
+    )
     assert (said.code, said.err) == (0, "")
     files = desk.files("out")
     made = desk.files("..").keys() - outside

@@ -117,3 +117,15 @@ def test_percent_and_probability():
         *("95 %", "0.4 %", "7.5 %", "–", "0 %", "< 0.1 %", "100 %")
     ]
     assert [probability(p) for p in (0.0312, 0.5, 1e-9, NAN)] == ["0.031", "0.50", "< 0.0001", "–"]
+
+
+@pytest.mark.parametrize(
+    ("numbers", "text"),
+    [
+        ((111.0, 55.8, 9212.0), "111 (56 to 9212)"),
+        ((162.0, 13.5, math.nan), "162 (at least 14)"),
+        ((0.99, 0.70, 1.0), "0.99 (0.70 to 1.00)"),
+    ],
+)
+def test_a_lopsided_interval_is_judged_by_its_shorter_arm(numbers, text):
+    assert str(rounded(*numbers)) == text
