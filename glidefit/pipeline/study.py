@@ -138,6 +138,8 @@ def _condition(
 
     settings = sourced.values
     level = settings.interval.level
+    # The order of rows in a sheet means nothing, so it must not change which draws a day gets.
+    recordings = sorted(recordings, key=lambda r: (r.day, r.chamber, r.recording))
     if not any(r.clean.kept.any() for r in recordings):
         return summarise.condition_result(
             condition=condition,
