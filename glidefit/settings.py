@@ -19,7 +19,12 @@ def setting(default: Any, unit: str, help: str, **limits: Any) -> Any:
 
 class _Section(BaseModel):
     model_config = ConfigDict(
-        extra="forbid", frozen=True, allow_inf_nan=False, strict=True, str_min_length=1
+        extra="forbid",
+        frozen=True,
+        allow_inf_nan=False,
+        strict=True,
+        str_min_length=1,
+        defer_build=True,  # the help of a command needs the declarations alone, and soon
     )
 
 
@@ -131,13 +136,13 @@ class PageSettings(_Section):
 class Settings(_Section):
     """All settings, in sections."""
 
-    columns: ColumnSettings = ColumnSettings()
-    detect: DetectSettings = DetectSettings()
-    link: LinkSettings = LinkSettings()
-    clean: CleanSettings = CleanSettings()
-    fit: FitSettings = FitSettings()
-    interval: IntervalSettings = IntervalSettings()
-    page: PageSettings = PageSettings()
+    columns: ColumnSettings = Field(default_factory=ColumnSettings)
+    detect: DetectSettings = Field(default_factory=DetectSettings)
+    link: LinkSettings = Field(default_factory=LinkSettings)
+    clean: CleanSettings = Field(default_factory=CleanSettings)
+    fit: FitSettings = Field(default_factory=FitSettings)
+    interval: IntervalSettings = Field(default_factory=IntervalSettings)
+    page: PageSettings = Field(default_factory=PageSettings)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

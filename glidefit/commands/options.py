@@ -28,7 +28,8 @@ class _Count(click.types.IntParamType):
 
 
 _KINDS = {float: _Number(), int: _Count(), str: click.STRING}
-SHEET = click.Path(path_type=Path)
+# Whether it can be read is found out, and told, where it is read.
+SHEET = click.Path(path_type=Path, readable=False)
 
 
 def with_settings(*sections: str) -> Callable[[_Command], _Command]:
@@ -41,7 +42,7 @@ def with_settings(*sections: str) -> Callable[[_Command], _Command]:
         return click.option(
             "--settings",
             "settings_file",
-            type=click.Path(path_type=Path),
+            type=click.Path(path_type=Path, readable=False),
             metavar="FILE",
             help="Settings as TOML; an option wins over the file.",
         )(command)

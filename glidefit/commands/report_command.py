@@ -10,7 +10,7 @@ from glidefit.commands.wording import counted
 
 
 @click.command("report")
-@click.argument("run", type=click.Path(path_type=Path), metavar="RUN")
+@click.argument("run", type=click.Path(path_type=Path, readable=False), metavar="RUN")
 def command(run: Path) -> None:
     """Write the pages of a run anew from its results.
 

@@ -14,7 +14,7 @@ from glidefit.commands import options
 @click.argument("sheets", nargs=-1, required=True, type=options.SHEET, metavar="SHEET...")
 @click.option(
     "--out",
-    type=click.Path(path_type=Path),
+    type=click.Path(path_type=Path, readable=False),
     metavar="DIR",
     help="Folder for pages and tables.  (default: reports/<sheet name>)",
 )

@@ -11,7 +11,7 @@ from glidefit.commands.wording import counted
 
 
 @click.command("sheet")
-@click.argument("folder", type=click.Path(path_type=Path), metavar="FOLDER")
+@click.argument("folder", type=click.Path(path_type=Path, readable=False), metavar="FOLDER")
 @click.option(
     "--names",
     metavar="PATTERN",
@@ -19,7 +19,7 @@ from glidefit.commands.wording import counted
 )
 @click.option(
     "--out",
-    type=click.Path(path_type=Path),
+    type=click.Path(path_type=Path, readable=False),
     metavar="FILE",
     help="Where to write the sheet.  (default: assay.csv in FOLDER)",
 )

@@ -10,10 +10,10 @@ from glidefit.commands.wording import counted
 
 
 @click.command("simulate")
-@click.argument("recipe", type=click.Path(path_type=Path), metavar="RECIPE")
+@click.argument("recipe", type=click.Path(path_type=Path, readable=False), metavar="RECIPE")
 @click.option(
     "--out",
-    type=click.Path(path_type=Path),
+    type=click.Path(path_type=Path, readable=False),
     required=True,
     metavar="DIR",
     help="Folder for the sheet, the recordings and the truth.",

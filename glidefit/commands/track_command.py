@@ -15,7 +15,7 @@ from glidefit.commands.wording import counted
 @click.argument("sheets", nargs=-1, required=True, type=options.SHEET, metavar="SHEET...")
 @click.option(
     "--out",
-    type=click.Path(path_type=Path),
+    type=click.Path(path_type=Path, readable=False),
     required=True,
     metavar="DIR",
     help="Folder for the track tables and their sheet.",

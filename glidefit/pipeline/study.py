@@ -230,7 +230,7 @@ def _why_nothing(
     reason = np.concatenate([r.clean.reason for r in recordings])
     counts = {name: int((reason == name).sum()) for name in REASONS if (reason == name).any()}
     listed = ", ".join(f"{n} {name}" for name, n in counts.items())
-    text = f"{condition}: nothing left to fit; of {len(reason)} tracks were set aside: {listed}."
+    text = f"{condition}: nothing left to fit; all of {len(reason)} tracks were set aside ({listed})."
     worst = max(counts, key=lambda name: counts[name])
     return f"{text} {_closest(worst, recordings, settings)}"
 

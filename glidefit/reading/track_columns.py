@@ -18,6 +18,10 @@ Floats = NDArray[np.float64]
 _TABLE = "a track table"
 _SHOWN = 20  # columns listed in a message
 
+# What programs write where they have no position, and what to do about it.
+_LOST = ("nan", "inf", "infinity")
+_GAP = "Delete the row: a missing frame is a gap."
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Columns:
@@ -215,8 +219,9 @@ def numbers(columns: Columns, name: str, *, expected: str, may_be_empty: bool = 
     more = _more(len(rows) - 1)
     if texts[0]:
         error = not_a_number(texts[0], where, expected=expected)
-        raise InputError(where, error.found + more, expected=error.expected, remedy=error.remedy)
-    remedy = "Fill it in, or delete the row: a missing frame is a gap."
+        remedy = error.remedy if may_be_empty or texts[0].strip("+-").lower() not in _LOST else _GAP
+        raise InputError(where, error.found + more, expected=error.expected, remedy=remedy)
+    remedy = f"Fill it in, or {_GAP[0].lower()}{_GAP[1:]}"
     raise InputError(where, f"is empty{more}", expected=expected, remedy=remedy)
 
 

@@ -167,3 +167,23 @@ def process(tmp_path):
         return Said(done.returncode, done.stdout, done.stderr)
 
     return call
+
+
+@pytest.fixture
+def sheet(desk):
+    return desk.two_conditions()
+
+
+@pytest.fixture(scope="session")
+def finished(tmp_path_factory):
+    """Place of a finished run of ``sheet``, made by the first test that needs it."""
+    return tmp_path_factory.mktemp("finished") / "assay"
+
+
+@pytest.fixture
+def report(desk, sheet, finished):
+    """The report of an earlier run."""
+    if not finished.exists():
+        assert desk.glidefit("run", sheet, "--out", finished).code == 0
+    shutil.copytree(finished, desk.folder / "reports/assay")
+    return "reports/assay"

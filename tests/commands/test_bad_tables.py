@@ -48,9 +48,10 @@ def test_position_that_is_no_number(desk, cell, told):
 
 def test_nan_position(desk):
     name = desk.table("a.csv", change={6: "1,4,nan,3", 9: "1,7,NaN,3"})
-    said = refused(desk, name)
-    assert said.startswith("Error: a.csv, row 6, column 'x_um': holds 'nan', which is not a number")
-    assert "(and 1 more cell of this column)" in said
+    assert refused(desk, name) == (
+        "Error: a.csv, row 6, column 'x_um': holds 'nan', which is not a number (and 1 more cell "
+        "of this column); expected a position in µm. Delete the row: a missing frame is a gap.\n"
+    )
 
 
 def test_repeated_frame(desk):

@@ -4,33 +4,12 @@ from __future__ import annotations
 
 import os
 import re
-import shutil
 import signal
 from pathlib import Path
 
 import pytest
 
 from glidefit.running import folder as run_folder
-
-
-@pytest.fixture
-def sheet(desk):
-    return desk.two_conditions()
-
-
-@pytest.fixture(scope="session")
-def finished(tmp_path_factory):
-    """A finished run of ``sheet`` with pages, to be copied."""
-    return tmp_path_factory.mktemp("finished") / "assay"
-
-
-@pytest.fixture
-def report(desk, sheet, finished):
-    """The report of an earlier run."""
-    if not finished.exists():
-        assert desk.glidefit("run", sheet, "--out", finished).code == 0
-    shutil.copytree(finished, desk.folder / "reports/assay")
-    return "reports/assay"
 
 
 def refused(desk, *arguments):

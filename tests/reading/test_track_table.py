@@ -289,6 +289,7 @@ def test_parquet_without_its_library(tmp_path, monkeypatch):
 UM = "a position in µm"
 FRAME = "a frame as a whole number from 0"
 FILL = "Fill it in, or delete the row: a missing frame is a gap."
+GAP = "Delete the row: a missing frame is a gap."
 ALONE = "Write the number alone, without a unit."
 
 
@@ -298,9 +299,9 @@ ALONE = "Write the number alone, without a unit."
         ("1,0,0,0\n\n1,1,,0", f"row 4, column 'x_um': is empty; expected {UM}. {FILL}"),
         ("1,0,0,0\n1,1,0", f"row 3, column 'y_um': is empty; expected {UM}. {FILL}"),
         ("1,0,nan,0\n1,1,NaN,0\n1,2,inf,0", "row 2, column 'x_um': holds 'nan', which is not a "
-         f"number (and 2 more cells of this column); expected {UM}. {ALONE}"),
+         f"number (and 2 more cells of this column); expected {UM}. {GAP}"),
         ("1,0,0,-inf", f"row 2, column 'y_um': holds '-inf', which is not a number; expected {UM}. "
-         f"{ALONE}"),
+         f"{GAP}"),
         ("1,0,0,0\n1,1,lost,0\n1,2,,0", "row 3, column 'x_um': holds 'lost', which is not a number "
          f"(and 1 more cell of this column); expected {UM}. {ALONE}"),
         ("1,0,1_0,0", f"row 2, column 'x_um': holds '1_0', which is not a number; expected {UM}. "
@@ -345,7 +346,7 @@ def test_a_fault_in_parquet_names_its_row(tmp_path):
     assert problem(tmp_path, pd.DataFrame(table), name="t.parquet").splitlines() == [
         f"t.parquet, row 2, column 'x_um': is empty; expected {UM}. {FILL}",
         "t.parquet, row 2, column 'y_um': holds 'inf', which is not a number; expected "
-        f"{UM}. {ALONE}",
+        f"{UM}. {GAP}",
     ]
     table["x_um"] = ["left", "right"]
     assert problem(tmp_path, pd.DataFrame(table), name="t.parquet").splitlines()[0] == (
