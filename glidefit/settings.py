@@ -46,7 +46,11 @@ class DetectSettings(_Section):
     """How spots are found in a frame."""
 
     threshold: float = setting(
-        5.0, "× noise", "How far a spot must stand out of the noise of the filtered frame.", gt=0
+        5.0,
+        "× noise",
+        "How far a spot must stand out of the noise of the filtered frame; raised a little in "
+        "large frames and in the dark, so that empty frames stay empty.",
+        gt=0,
     )
     spot_diameter: float = setting(
         0.9, "µm", "Width of the picture of one spot, out to where it fades.", gt=0

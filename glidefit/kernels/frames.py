@@ -21,8 +21,8 @@ Mask = NDArray[np.bool_]
 _SPOT_HEIGHT = 4.0
 # Rounding to whole counts adds this variance.
 _ROUNDING_VARIANCE = 1 / 12
-# Looks among which Gaussian noise rises above 5 in one of about 180 frames.
-_REFERENCE_LOOKS = 300.0
+# Fewer looks than frames usually have: at 5 hardly one empty frame in 500 has a false spot.
+_REFERENCE_LOOKS = 140.0
 
 
 class FilteredFrame(NamedTuple):
@@ -73,10 +73,12 @@ def filter_frame(frame: NDArray[Any], *, width_px: float, block_px: int) -> Filt
     rounding = _ROUNDING_VARIANCE / weight if np.issubdtype(frame.dtype, np.integer) else 0.0
     least = max(rounding, _negligible(filtered))
     variance = _variance_line(filtered, background, spots, block_px=block_px, least=least)
+    # Where the light is strong, noise was taken for spots so far.
+    spots = _around(filtered / np.sqrt(variance), _SPOT_HEIGHT, near)
+    variance = _variance_line(filtered, background, spots, block_px=block_px, least=least)
 
     contrast: Image = image - background
     significance = (filtered / np.sqrt(variance)).astype(np.float32)
-    spots = _around(significance, _SPOT_HEIGHT, near)
     seen = _Empty(*_moments(contrast, filtered, significance, spots))
     return FilteredFrame(
         contrast=contrast,
@@ -92,10 +94,10 @@ def detection_height(threshold: float, *, looks: float, skewness: float = 0.0) -
     """Significance that a spot must reach so that ``threshold`` means the same in every frame.
 
     Noise alone rises above u in ``looks u exp(-u²/2)`` places of a frame. In a larger frame u is
-    raised, ``u² = threshold² + 2 ln(looks / 300)``, to let through as few false spots a frame as
-    ``threshold`` does in 300 looks: 0.4 at 4, 0.006 at 5, 0.00003 at 6. Photon noise in the dark
-    reaches higher than Gaussian noise: with its skewness γ a gamma distribution is as rarely above
-    ``(2/γ) ((1 + γu/6 - γ²/36)³ - 1)``.
+    raised, ``u² = threshold² + 2 ln(looks / 140)``, to let through as few false spots a frame as
+    ``threshold`` does in 140 looks: of empty simulated frames 0.3 at 4, 0.002 at 5.
+    Photon noise in the dark reaches higher than Gaussian noise: with its skewness γ, a gamma
+    distribution is as rarely above ``(2/γ) ((1 + γu/6 - γ²/36)³ - 1)``.
 
     References
     ----------
@@ -135,8 +137,8 @@ def _background(image: Image, spots: Mask, *, block_px: int) -> Image:
     beside, beside_total = (ndimage.uniform_filter(a, 3, mode="nearest") for a in (count, total))
     mean = total.sum() / max(count.sum(), 1.0)
     level = (total + 0.1 * beside_total + 1e-6 * mean) / (count + 0.1 * beside + 1e-6)
-    down, right = _places(image.shape[0], rows), _places(image.shape[1], columns)
-    background: Image = _interpolated(level, down, right)
+    places = *_places(image.shape[0], rows), *_places(image.shape[1], columns)
+    background: Image = _interpolated(level, *places)
     return background
 
 
@@ -145,26 +147,30 @@ def _block_edges(n: int, block_px: int) -> NDArray[np.int64]:
     return np.round(np.linspace(0, n, blocks + 1)).astype(np.int64)
 
 
-def _places(n: int, edges: NDArray[np.int64]) -> Floats:
-    """Where pixels (n,) lie between the centres of blocks, counted in blocks."""
+def _places(n: int, edges: NDArray[np.int64]) -> tuple[NDArray[np.int64], Floats]:
+    """Of pixels (n,): the first of two blocks, and the way from its centre to the other's.
+
+    Before the first centre and after the last one the way is < 0 or > 1.
+    """
     centres = (edges[:-1] + edges[1:] - 1) / 2
-    return np.interp(np.arange(n), centres, np.arange(len(centres)))
+    if len(centres) == 1:
+        return np.zeros(n, dtype=np.int64), np.zeros(n)
+    first = np.clip(np.searchsorted(centres, np.arange(n)) - 1, 0, len(centres) - 2)
+    return first, (np.arange(n) - centres[first]) / (centres[first + 1] - centres[first])
 
 
 @njit(cache=True)
-def _interpolated(level, rows, columns):  # type: ignore[no-untyped-def]
-    """Bilinear interpolation of blocks at the places of rows and columns."""
+def _interpolated(level, rows, down, columns, right):  # type: ignore[no-untyped-def]
+    """Bilinear interpolation of blocks, straight on at the border."""
     result = np.empty((len(rows), len(columns)), dtype=np.float32)
     last = (level.shape[0] - 1, level.shape[1] - 1)
     for y in range(len(rows)):
-        i = int(rows[y])
-        down, below = rows[y] - i, min(i + 1, last[0])
+        i, below = rows[y], min(rows[y] + 1, last[0])
         for x in range(len(columns)):
-            j = int(columns[x])
-            right, beside = columns[x] - j, min(j + 1, last[1])
-            upper = level[i, j] * (1 - right) + level[i, beside] * right
-            lower = level[below, j] * (1 - right) + level[below, beside] * right
-            result[y, x] = upper * (1 - down) + lower * down
+            j, beside = columns[x], min(columns[x] + 1, last[1])
+            upper = level[i, j] * (1 - right[x]) + level[i, beside] * right[x]
+            lower = level[below, j] * (1 - right[x]) + level[below, beside] * right[x]
+            result[y, x] = upper * (1 - down[y]) + lower * down[y]
     return result
 
 
@@ -217,16 +223,17 @@ def _variance_line(
 
 
 def _robust_line(x: Floats, y: Floats) -> tuple[float, float, float]:
-    """Slope, mean x and mean y of a line without the points far from a first one."""
-    keep = np.ones(len(x), dtype=np.bool_)
+    """Slope, mean x and mean y of a line; scatter in proportion to y, without points far off."""
+    weight = np.ones(len(x))
     slope = mean_x = mean_y = 0.0
-    for _ in range(3):
-        mean_x, mean_y = float(x[keep].mean()), float(y[keep].mean())
-        dx = x[keep] - mean_x
-        spread = float(np.sum(dx**2))
-        slope = float(np.sum(dx * (y[keep] - mean_y))) / spread if spread > 0 else 0.0
-        off = np.abs(y - mean_y - slope * (x - mean_x))
-        keep = off <= 6 * np.median(off)
+    for _ in range(4):
+        mean_x, mean_y = float(np.average(x, weights=weight)), float(np.average(y, weights=weight))
+        dx = x - mean_x
+        spread = float(np.sum(weight * dx**2))
+        slope = float(np.sum(weight * dx * (y - mean_y))) / spread if spread > 0 else 0.0
+        line = np.maximum(mean_y + slope * dx, 0.1 * mean_y)
+        off = np.abs(y - line) / line if mean_y > 0 else np.zeros(len(x))
+        weight = np.where(off <= 6 * np.median(off), (mean_y / line) ** 2 if mean_y > 0 else 1, 0)
     return slope, mean_x, mean_y
 
 
@@ -324,15 +331,21 @@ def fit_spots(
     ----------
     Mortensen et al., Nat. Methods 7, 377 (2010): the likelihood and what it can reach.
     """
-    n = len(x_px)
-    spots = np.zeros((n, 4))
+    spots = np.zeros((len(x_px), 4))
     spots[:, 0], spots[:, 1] = x_px, y_px
     column, row = np.rint(x_px).astype(np.int64), np.rint(y_px).astype(np.int64)
-    variance = filtered.noise[row, column].astype(np.float64) ** 2
-    spots[:, 2] = np.maximum(filtered.contrast[row, column], np.sqrt(variance))
-    residual = filtered.contrast.astype(np.float64)
-    quality = np.full((n, 7), np.nan)
-    _fit_in_turns(residual, spots, column, row, variance, gain, width_px, half_px, quality)
+    sd = filtered.noise[row, column].astype(np.float64)
+    spots[:, 2] = np.maximum(filtered.contrast[row, column], sd)
+    scene = _Scene(
+        contrast=filtered.contrast.astype(np.float64),
+        residual=filtered.contrast.astype(np.float64),
+        gain=float(gain),
+        width=float(width_px),
+        half=int(half_px),
+    )
+    windows = _Windows(column=column, row=row, variance=sd**2)
+    quality = np.full((len(x_px), 7), np.nan)
+    _fit_in_turns(scene, windows, spots, quality)
     return FittedSpots(
         x_px=spots[:, 0],
         y_px=spots[:, 1],
@@ -349,20 +362,48 @@ _SWEEPS = 40
 _STILL = 1e-3  # px, a spot that moves less in a turn stands still
 
 
+class _Scene(NamedTuple):
+    """What all fits of a frame share."""
+
+    contrast: Floats  # (h, w)
+    residual: Floats  # (h, w), contrast without the models of all spots
+    gain: float
+    width: float
+    half: int
+
+
+class _Windows(NamedTuple):
+    """Centre of each spot's window and variance of a dark pixel there, (n,) arrays."""
+
+    column: NDArray[np.int64]
+    row: NDArray[np.int64]
+    variance: Floats
+
+
+class _Equations(NamedTuple):
+    """Weighted normal equations of one spot: x, y, amplitude, level, and last the width."""
+
+    normal: Floats  # (5, 5)
+    score: Floats  # (5,)
+    covariance: Floats  # (4, 4), inverse of the normal matrix without the width
+
+
 @njit(cache=True)
-def _add(residual, spot, width, half, sign):  # type: ignore[no-untyped-def]
+def _add(scene, spot, sign):  # type: ignore[no-untyped-def]
     """Add a spot's model to the residual, or take it away."""
-    h, w = residual.shape
+    h, w = scene.residual.shape
+    reach = scene.half + 2
     x0, y0 = int(np.rint(spot[0])), int(np.rint(spot[1]))
-    for y in range(max(0, y0 - half), min(h, y0 + half + 1)):
-        gy = sign * spot[2] * math.exp(-((y - spot[1]) ** 2) / (2 * width**2))
-        for x in range(max(0, x0 - half), min(w, x0 + half + 1)):
-            residual[y, x] += gy * math.exp(-((x - spot[0]) ** 2) / (2 * width**2))
+    for y in range(max(0, y0 - reach), min(h, y0 + reach + 1)):
+        gy = sign * spot[2] * math.exp(-((y - spot[1]) ** 2) / (2 * scene.width**2))
+        for x in range(max(0, x0 - reach), min(w, x0 + reach + 1)):
+            gx = math.exp(-((x - spot[0]) ** 2) / (2 * scene.width**2))
+            scene.residual[y, x] += gx * gy
 
 
 @njit(cache=True)
 def _slopes(spot, x, y, width, slopes):  # type: ignore[no-untyped-def]
-    """Derivatives of a pixel by x, y, amplitude, level and width."""
+    """Derivatives of a pixel by x, y, amplitude, level and width; returns the Gaussian."""
     dx, dy = x - spot[0], y - spot[1]
     g = math.exp(-(dx * dx + dy * dy) / (2 * width * width))
     slopes[0] = spot[2] * g * dx / width**2
@@ -374,102 +415,129 @@ def _slopes(spot, x, y, width, slopes):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)
-def _normal_equations(  # type: ignore[no-untyped-def]
-    residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score
-):
-    """Weighted normal matrix (5, 5) and score (5,) of a spot whose model is in the residual."""
-    h, w = residual.shape
-    slopes = np.empty(5)
-    normal[:] = 0.0
-    score[:] = 0.0
+def _set_up(scene, windows, k, spot, equations):  # type: ignore[no-untyped-def]
+    """Fill in the equations of spot k."""
+    h, w = scene.residual.shape
+    half, x0, y0 = scene.half, windows.column[k], windows.row[k]
+    normal, score, slopes = equations.normal, equations.score, np.empty(5)
+    for i in range(5):
+        score[i] = 0.0
+        for j in range(5):
+            normal[i, j] = 0.0
     for y in range(max(0, y0 - half), min(h, y0 + half + 1)):
         for x in range(max(0, x0 - half), min(w, x0 + half + 1)):
-            _slopes(spot, x, y, width, slopes)
-            light = max(0.0, contrast[y, x] - residual[y, x])
-            weight = 1.0 / (variance + gain * light)
-            off = residual[y, x] - spot[3]
+            _slopes(spot, x, y, scene.width, slopes)
+            light = max(0.0, scene.contrast[y, x] - scene.residual[y, x])
+            weight = 1.0 / (windows.variance[k] + scene.gain * light)
+            off = scene.residual[y, x] - spot[3]
             for i in range(5):
                 score[i] += weight * off * slopes[i]
                 for j in range(5):
                     normal[i, j] += weight * slopes[i] * slopes[j]
     for i in range(5):  # keeps a spot without brightness solvable
         normal[i, i] = normal[i, i] * (1 + 1e-9) + 1e-12
-    return score
+    _invert(normal, equations.covariance)
 
 
 @njit(cache=True)
-def _fit_in_turns(  # type: ignore[no-untyped-def]
-    residual, spots, columns, rows, variance, gain, width, half, quality
-):
-    """Fit spots (n, 4: x, y, amplitude, level) in turns; quality gets what `fit_spots` returns."""
-    contrast = residual.copy()
-    normal, score = np.empty((5, 5)), np.empty(5)
-    reach = half + 2
-    for spot in spots:
-        _add(residual, spot, width, reach, -1.0)
+def _invert(normal, inverse):  # type: ignore[no-untyped-def]
+    """Inverse (4, 4) of the first rows and columns, positive definite (Gauss and Jordan)."""
+    work = np.empty((4, 4))
+    for i in range(4):
+        for j in range(4):
+            work[i, j] = normal[i, j]
+            inverse[i, j] = 1.0 if i == j else 0.0
+    for k in range(4):
+        pivot = work[k, k]
+        for j in range(4):
+            work[k, j] /= pivot
+            inverse[k, j] /= pivot
+        for i in range(4):
+            if i != k:
+                factor = work[i, k]
+                for j in range(4):
+                    work[i, j] -= factor * work[k, j]
+                    inverse[i, j] -= factor * inverse[k, j]
+
+
+@njit(cache=True)
+def _times(matrix, vector):  # type: ignore[no-untyped-def]
+    """Matrix (4, 4) times the first four of a vector."""
+    result = np.zeros(4)
+    for i in range(4):
+        for j in range(4):
+            result[i] += matrix[i, j] * vector[j]
+    return result
+
+
+@njit(cache=True)
+def _fit_in_turns(scene, windows, spots, quality):  # type: ignore[no-untyped-def]
+    """Fit spots (n, 4: x, y, amplitude, level) in turns; quality (n, 7) as `_assess` has it."""
+    equations = _Equations(np.empty((5, 5)), np.empty(5), np.empty((4, 4)))
+    for k in range(len(spots)):
+        _add(scene, spots[k], -1.0)
     for _ in range(_SWEEPS):
-        largest = 0.0
+        farthest = 0.0
         for k in range(len(spots)):
-            spot = spots[k]
-            if spot[2] <= 0:
-                continue
-            _normal_equations(
-                residual, contrast, spot, columns[k], rows[k], variance[k], gain, width, half,
-                normal, score,
-            )  # fmt: skip
-            step = np.linalg.solve(normal[:4, :4].copy(), score[:4].copy())
-            longest = max(abs(step[0]), abs(step[1]))
-            if longest > width / 2:
-                step[:2] *= width / 2 / longest
-            _add(residual, spot, width, reach, 1.0)
-            spot += step
-            far = max(abs(spot[0] - columns[k]), abs(spot[1] - rows[k])) > half
-            if far or spot[2] <= 0:
-                spot[2] = 0.0
-            _add(residual, spot, width, reach, -1.0)
-            largest = max(largest, longest)
-        if largest < _STILL:
+            if spots[k, 2] > 0:
+                farthest = max(farthest, _improve(scene, windows, k, spots[k], equations))
+        if farthest < _STILL:
             break
     for k in range(len(spots)):
         if spots[k, 2] > 0:
-            _assess(
-                residual, contrast, spots[k], columns[k], rows[k], variance[k], gain, width, half,
-                normal, score, quality[k],
-            )  # fmt: skip
+            _assess(scene, windows, k, spots[k], equations, quality[k])
         else:
             quality[k, 0] = quality[k, 1] = np.inf
 
 
 @njit(cache=True)
-def _assess(  # type: ignore[no-untyped-def]
-    residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score, quality
-):
-    """Precision, amplitude error, score and information of the width, excess variance, spike."""
-    _normal_equations(residual, contrast, spot, x0, y0, variance, gain, width, half, normal, score)
-    inner = normal[:4, :4].copy()
-    covariance = np.linalg.inv(inner)
+def _improve(scene, windows, k, spot, equations):  # type: ignore[no-untyped-def]
+    """One step of the fit of spot k, which it returns the length of; amplitude 0 if it is lost."""
+    _set_up(scene, windows, k, spot, equations)
+    step = _times(equations.covariance, equations.score)
+    longest = max(abs(step[0]), abs(step[1]))
+    shorten = min(1.0, scene.width / 2 / longest) if longest > 0 else 1.0
+    _add(scene, spot, 1.0)
+    for i in range(4):
+        spot[i] += step[i] * (shorten if i < 2 else 1.0)
+    away = max(abs(spot[0] - windows.column[k]), abs(spot[1] - windows.row[k]))
+    if away > scene.half or spot[2] <= 0:
+        spot[2] = 0.0
+    _add(scene, spot, -1.0)
+    return longest
+
+
+@njit(cache=True)
+def _assess(scene, windows, k, spot, equations, quality):  # type: ignore[no-untyped-def]
+    """Precision, amplitude error, width's score and information, excess and light, spike."""
+    _set_up(scene, windows, k, spot, equations)
+    covariance, variance = equations.covariance, windows.variance[k]
     quality[0] = math.sqrt((covariance[0, 0] + covariance[1, 1]) / 2)
     quality[1] = math.sqrt(covariance[2, 2])
     # The width, when everything else follows it.
-    along = np.linalg.solve(inner, normal[:4, 4].copy())
-    quality[2] = score[4] - np.sum(along * score[:4])
-    quality[3] = normal[4, 4] - np.sum(along * normal[:4, 4])
+    along = _times(covariance, equations.normal[4])
+    quality[2], quality[3] = equations.score[4], equations.normal[4, 4]
+    for i in range(4):
+        quality[2] -= along[i] * equations.score[i]
+        quality[3] -= along[i] * equations.normal[i, 4]
     quality[4] = quality[5] = quality[6] = 0.0
-    pixels, misfit = 0, 0.0
-    h, w = residual.shape
-    slopes = np.empty(5)
+    pixels, misfit, slopes = 0, 0.0, np.empty(5)
+    h, w = scene.residual.shape
+    half, x0, y0 = scene.half, windows.column[k], windows.row[k]
     for y in range(max(0, y0 - half), min(h, y0 + half + 1)):
         for x in range(max(0, x0 - half), min(w, x0 + half + 1)):
-            g = _slopes(spot, x, y, width, slopes)
-            light = max(0.0, contrast[y, x] - residual[y, x])
-            pixel = variance + gain * light
-            pixels += 1
-            if abs(x - x0) <= 1 and abs(y - y0) <= 1:
-                quality[6] = max(quality[6], (residual[y, x] - spot[3]) / spot[2])
-            misfit += (residual[y, x] - spot[3]) ** 2 / pixel
-            leverage = np.sum(covariance * np.outer(slopes[:4], slopes[:4])) / pixel
-            off = (residual[y, x] - spot[3]) ** 2 / max(0.1, 1 - leverage)
-            quality[4] += (off - variance) * g / pixel**2
+            g = _slopes(spot, x, y, scene.width, slopes)
+            off = scene.residual[y, x] - spot[3]
+            light = max(0.0, scene.contrast[y, x] - scene.residual[y, x])
+            pixel = variance + scene.gain * light
+            leverage, spread = 0.0, _times(covariance, slopes)
+            for i in range(4):
+                leverage += spread[i] * slopes[i] / pixel
+            quality[4] += (off**2 / max(0.1, 1 - leverage) - variance) * g / pixel**2
             quality[5] += light * g / pixel**2
+            if abs(x - x0) <= 1 and abs(y - y0) <= 1:
+                quality[6] = max(quality[6], off / spot[2])
+            pixels += 1
+            misfit += off**2 / pixel
     if pixels > 4:  # two spots in one, or a smeared one, are placed less well than noise alone says
         quality[0] *= math.sqrt(max(1.0, misfit / (pixels - 4)))

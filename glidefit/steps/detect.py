@@ -106,6 +106,8 @@ def _rows(number: int, spots: FittedSpots, width_px: float) -> Floats:
 
 def _diameter(spot_diameter: float, pixel_um: float, where: str) -> int:
     """Spot diameter in pixels, odd."""
+    if not pixel_um > 0:
+        raise ValueError(f"pixel_um must be > 0, is {pixel_um:g}")
     diameter = 2 * int(spot_diameter / pixel_um / 2) + 1
     if not 3 <= spot_diameter / pixel_um <= 99:
         raise InputError(
@@ -149,15 +151,17 @@ class _Optics:
 
     def learned(self, fitted: FittedSpots, alone: Mask) -> _Optics:
         """With the spots of another frame, of which those that are alone show their width."""
+        if not alone.any():
+            return self
         widths = fitted.width_px[alone]
         widths = widths[(widths > self.width_px / 2) & (widths < 2 * self.width_px)]
+        middle = float(np.median(widths)) if len(widths) else self.width_px
+        n = self.spots + len(widths)
         excess, light = fitted.excess[alone].T
         ratio = excess / np.maximum(light, 1e-300)
         # Two spots in one do not fit, and would pass for noise.
-        off = np.abs(ratio - np.median(ratio)) if len(ratio) else ratio
-        usual = off <= 6 * np.median(off) if len(ratio) else np.ones(0, dtype=np.bool_)
-        n = self.spots + len(widths)
-        middle = float(np.median(widths)) if len(widths) else self.width_px
+        off = np.abs(ratio - np.median(ratio))
+        usual = off <= 6 * np.median(off)
         return dataclasses.replace(
             self,
             width_px=(self.spots * self.width_px + len(widths) * middle) / n,

@@ -31,7 +31,7 @@ from glidefit.tracks import Detections, Tracks
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-# How spots move is learned from so many frames.
+# How spots move is learned from so many frames, from the first one with spots on.
 _LEARNING_FRAMES = 400
 # Spots in one group of competing links from which on a frame is called crowded.
 _CROWD = 30
@@ -76,7 +76,8 @@ def link(
     if len(detections.frame) == 0:
         return _tracks(detections, times_s, np.empty(0, dtype=np.int64)), ()
     spots = _spots(detections, times_s)
-    seen = spots[:_LEARNING_FRAMES]
+    first = int(detections.frame[0])
+    seen = spots[first : first + _LEARNING_FRAMES]
     law = _first_law(seen, settings)
     for _ in range(2):
         law = _learned(law, seen, _linked(seen, law, settings)[0], settings)

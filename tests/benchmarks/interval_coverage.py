@@ -1,6 +1,6 @@
 """Bias, scatter and coverage of the whole chain on simulated assays with known truth.
 
-    python tests/benchmarks/coverage.py [--experiments 400] [--case kinesin] [--seed 1]
+    python tests/benchmarks/interval_coverage.py [--experiments 400] [--case kinesin] [--seed 1]
 
 Every experiment is 3 days × 2 chambers × 33 filaments in an 80 µm field that they enter and leave,
 with day, chamber and filament effects (SD of speed 7, 4 and 10 %; of rotational diffusion 15, 10
