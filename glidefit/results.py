@@ -61,7 +61,7 @@ class Curve:
     model: tuple[float, ...]  # NaN outside the fitted range
     model_low: tuple[float, ...]
     model_high: tuple[float, ...]
-    fitted: tuple[bool, ...]  # points that entered the fit
+    fitted: tuple[bool, ...]  # lags at which the fit is judged; a fit to the MSD uses these
     frame_s: float
 
 
@@ -94,6 +94,7 @@ class TrackResult:
     net_advance_um: float
     path_um: float
     speed_um_s: float  # NaN if the track is too short to tell
+    speed_error_um_s: float = NAN  # standard error of the track's own speed
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -172,6 +173,22 @@ class RecordingResult:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ModelCheck:
+    """One way in which the fitted model could fail to describe the tracks."""
+
+    name: str
+    value: float
+    expected: float
+    tolerance: float  # a larger distance from what is expected is a problem
+    meaning: str
+
+    @property
+    def holds(self) -> bool:
+        """Within the tolerance; true where there is no value."""
+        return not abs(self.value - self.expected) > self.tolerance
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ConditionResult:
     """Everything about one condition."""
 
@@ -193,6 +210,7 @@ class ConditionResult:
     longest_lag_s: float
     heading_diffusion_rad2_s: float  # D_r read off the heading correlation
     methods: str  # a paragraph to quote
+    model_checks: tuple[ModelCheck, ...] = ()
 
     def __post_init__(self) -> None:
         if missing := QUANTITIES.keys() - self.estimates.keys():
@@ -288,9 +306,12 @@ _Record = TypeVar("_Record")
 def _record(kind: type[_Record], data: dict[str, Any]) -> _Record:
     hints = typing.get_type_hints(kind)
     fields = dataclasses.fields(kind)  # type: ignore[arg-type]
-    if missing := [f.name for f in fields if f.name not in data]:
+    # A key with a default was added later: earlier results do not have it.
+    needed = [f.name for f in fields if f.default is dataclasses.MISSING]
+    if missing := [name for name in needed if name not in data]:
         raise ValueError(f"{kind.__name__}: key {missing[0]!r} is missing")
-    return kind(**{f.name: _typed(hints[f.name], data[f.name]) for f in fields})
+    there = [f.name for f in fields if f.name in data]
+    return kind(**{name: _typed(hints[name], data[name]) for name in there})
 
 
 def _typed(hint: Any, value: Any) -> Any:

@@ -94,6 +94,11 @@ class CleanSettings(_Section):
 class FitSettings(_Section):
     """How the active-Brownian model is fitted."""
 
+    method: Literal["likelihood", "msd"] = setting(
+        "likelihood",
+        "",
+        "What the numbers come from; the mean squared displacement stands beside the likelihood.",
+    )
     bend: float = setting(
         0.15,
         "rad²",

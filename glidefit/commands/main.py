@@ -18,6 +18,8 @@ COMMANDS = {
     "track": "Turn the videos of an assay sheet into track tables.",
     "fit": "Fit the track tables of an assay sheet; results and tables, no pages.",
     "report": "Write the pages of a run anew from its results.",
+    "rehearse": "Simulate the design of a run many times and see whether its intervals hold.",
+    "plan": "Say how many days, chambers and filaments the next experiment needs.",
     "simulate": "Make an assay with known truth from a recipe.",
 }
 

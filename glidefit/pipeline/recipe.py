@@ -108,6 +108,7 @@ _NESTED = {
     "conditions": ScenarioCondition,
     "speed_spread": Spread,
     "rotational_diffusion_spread": Spread,
+    "motile_fraction_spread": Spread,
     "faults": CameraFaults,
 }
 
@@ -154,6 +155,10 @@ def _made(kind: type[Any], values: dict[str, Any], where: str, errors: list[Inpu
 
 def _value(hint: Any, value: Any, where: str, errors: list[InputError]) -> Any:
     kinds = typing.get_args(hint) if isinstance(hint, types.UnionType) else (hint,)
+    lists = [typing.get_args(kind)[0] for kind in kinds if Ellipsis in typing.get_args(kind)]
+    if lists and (isinstance(value, list) or len(kinds) == 1):
+        items = value if isinstance(value, list) else [value]
+        return tuple(_value(lists[0], item, where, errors) for item in items)
     if typing.get_origin(hint) is tuple:
         wanted = f"{len(typing.get_args(hint))} numbers in brackets"
         if isinstance(value, list) and len(value) == len(typing.get_args(hint)):
@@ -164,13 +169,14 @@ def _value(hint: Any, value: Any, where: str, errors: list[InputError]) -> Any:
         wanted = "a number"
         if _is_number(value):
             return float(value)
-    elif words := typing.get_args(hint):  # of a Literal
+    elif typing.get_origin(hint) is typing.Literal:
+        words = typing.get_args(hint)
         wanted = " or ".join(map(repr, words))
         if value in words:
             return value
     else:
-        wanted = {int: "a whole number", str: "text", bool: "true or false"}[hint]
-        if type(value) is hint:
+        wanted = {int: "a whole number", str: "text", bool: "true or false"}[kinds[0]]
+        if type(value) is kinds[0]:
             return value
     errors.append(
         InputError(where, f"the value is {value!r}", expected=wanted, remedy="Correct the recipe.")

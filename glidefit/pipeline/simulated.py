@@ -37,12 +37,15 @@ def cleaned(
 def experiment(
     scenario: Scenario, *, settings: Settings, rng: np.random.Generator
 ) -> dict[str, ConditionNumbers]:
-    """Simulate one assay and analyse it; by condition."""
+    """Simulate one assay and analyse it; by condition, without those that keep no track."""
     assay = simulate_assay(scenario, rng)
     recordings = [cleaned(r, scenario, settings=settings) for r in assay.recordings]
-    return {
-        condition.name: condition_numbers(
-            [r for r in recordings if r.condition == condition.name], settings=settings, rng=rng
-        )
+    by_condition = {
+        condition.name: [r for r in recordings if r.condition == condition.name]
         for condition in scenario.conditions
+    }
+    return {
+        name: condition_numbers(own, settings=settings, rng=rng)
+        for name, own in by_condition.items()
+        if any(r.clean.kept.any() for r in own)
     }

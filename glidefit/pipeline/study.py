@@ -182,6 +182,7 @@ def _condition(
         by_chamber.setdefault((e.day, e.chamber), {}).update(
             {name: float(e.values[i]) for name, i in motility.COLUMNS.items()}
         )
+    checks = summarise.model_checks(fitted.innovation, combined, fitted.columns)
     problems = summarise.problems(
         estimates=estimates,
         combined=combined,
@@ -189,6 +190,9 @@ def _condition(
         msd=msd,
         fit_problems=fitted.problems,
         undecided=sum(int((r.clean.kept & ~r.clean.decided).sum()) for r in recordings),
+        checks=checks,
+        left_out=fitted.left_out,
+        kept=counted.tracks_kept,
     )
     return ConditionResult(
         condition=condition,
@@ -201,7 +205,7 @@ def _condition(
         msd=msd,
         heading_correlation=heading,
         chambers=summarise.chambers(recordings, by_chamber),
-        tracks=summarise.tracks(recordings, fitted.track_speed_um_s),
+        tracks=summarise.tracks(recordings, fitted.track_speeds),
         drawn=drawn,
         time_points=points,
         spread=(
@@ -219,7 +223,9 @@ def _condition(
             level=level,
             resamples=settings.interval.resamples,
             version=glidefit.__version__,
+            method=fitted.method,
         ),
+        model_checks=checks,
     )
 
 
@@ -230,7 +236,9 @@ def _why_nothing(
     reason = np.concatenate([r.clean.reason for r in recordings])
     counts = {name: int((reason == name).sum()) for name in REASONS if (reason == name).any()}
     listed = ", ".join(f"{n} {name}" for name, n in counts.items())
-    text = f"{condition}: nothing left to fit; all of {len(reason)} tracks were set aside ({listed})."
+    text = (
+        f"{condition}: nothing left to fit; all of {len(reason)} tracks were set aside ({listed})."
+    )
     worst = max(counts, key=lambda name: counts[name])
     return f"{text} {_closest(worst, recordings, settings)}"
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, field, fields, replace
 from datetime import date, timedelta
 
 import numpy as np
@@ -109,13 +109,15 @@ class Scenario:
     pixel_um: float = 0.16
     localization_error_um: float = 0.03
     days: int = 3
-    chambers_per_day: int = 2  # of each condition
+    chambers_per_day: int | tuple[int, ...] = 2  # of each condition; or a number for each day
     recordings_per_chamber: int = 1  # each of its own field of view
-    filaments_in_field: float = 33.0  # of all kinds, expected in a recording at a moment
+    # Of all kinds, expected in a recording at a moment; or a number for each chamber of each day.
+    filaments_in_field: float | tuple[tuple[float, ...], ...] = 33.0
     speed_spread: Spread = field(default=Spread(day=0.07, chamber=0.04, filament=0.10))
     rotational_diffusion_spread: Spread = field(
         default=Spread(day=0.15, chamber=0.1, filament=0.15)
     )
+    motile_fraction_spread: Spread = field(default=Spread())  # of the fraction itself, not relative
     turning: Turning = "per_time"
     stuck_fraction: float = 0.0  # of the filament-frames, like the next two
     pivoting_fraction: float = 0.0
@@ -131,9 +133,13 @@ class Scenario:
         names = [condition.name for condition in self.conditions]
         if not names or len(set(names)) < len(names):
             raise ValueError("conditions must be there, each under its own name")
-        if min(self.days, self.chambers_per_day, self.recordings_per_chamber) < 1:
+        if min(self.days, *self.chambers_of_day, self.recordings_per_chamber) < 1:
             raise ValueError("days, chambers_per_day and recordings_per_chamber must be >= 1")
-        if not (min(self.field_um) > 0 and self.filaments_in_field >= 0):
+        if [len(numbers) for numbers in self.filaments_of_day] != list(self.chambers_of_day):
+            raise ValueError("filaments_in_field must have a number for each chamber of each day")
+        if len(self.chambers_of_day) != self.days:
+            raise ValueError("chambers_per_day must be one number, or one for each of the days")
+        if not (min(self.field_um) > 0 and min(map(min, self.filaments_of_day)) >= 0):
             raise ValueError("field_um must be > 0 and filaments_in_field >= 0")
         others = (self.stuck_fraction, self.pivoting_fraction, self.detached_fraction)
         if min(others) < 0 or sum(others) > 1:
@@ -148,6 +154,20 @@ class Scenario:
         _ = self.timing  # its own checks
 
     @property
+    def chambers_of_day(self) -> tuple[int, ...]:
+        """Chambers of each condition, by day."""
+        number = self.chambers_per_day
+        return number if isinstance(number, tuple) else (number,) * self.days
+
+    @property
+    def filaments_of_day(self) -> tuple[tuple[float, ...], ...]:
+        """Filaments in the field, by day and chamber of each condition."""
+        number = self.filaments_in_field
+        if isinstance(number, tuple):
+            return number
+        return tuple((number,) * n for n in self.chambers_of_day)
+
+    @property
     def timing(self) -> FrameTiming:
         """Times of the frames of every recording."""
         return FrameTiming(
@@ -158,7 +178,7 @@ class Scenario:
         )
 
     def expected_in_field(self, condition: ScenarioCondition) -> dict[str, float]:
-        """Filaments of each kind expected in the field at a moment.
+        """Filaments of each kind expected in the field at a moment, the mean over chambers.
 
         A condition's own motile fraction leaves the rest to the other kinds in the proportion
         of the scenario's fractions, or all of it to stuck ones where these are 0.
@@ -168,9 +188,16 @@ class Scenario:
             share = others / others.sum() if others.sum() > 0 else np.array([1.0, 0.0, 0.0])
             others = (1 - condition.motile_fraction) * share
         shares = [max(0.0, 1 - float(others.sum())), *map(float, others)]
-        return {
-            kind: share * self.filaments_in_field for kind, share in zip(KINDS, shares, strict=True)
-        }
+        filaments = self.filaments_in_field
+        if isinstance(filaments, tuple):
+            filaments = float(np.mean([n for numbers in filaments for n in numbers]))
+        return {kind: share * filaments for kind, share in zip(KINDS, shares, strict=True)}
+
+    def motile_fraction_of(self, condition: ScenarioCondition) -> float:
+        """Share of the filament-frames that glide: the condition's own, or what others leave."""
+        if condition.motile_fraction is not None:
+            return condition.motile_fraction
+        return max(0.0, 1 - self.stuck_fraction - self.pivoting_fraction - self.detached_fraction)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -249,34 +276,57 @@ def simulate_assay(scenario: Scenario, rng: np.random.Generator) -> SimulatedAss
     """
     recordings = []
     for number, day_rng in enumerate(rng.spawn(scenario.days)):
-        day = (_FIRST_DAY + timedelta(days=number)).isoformat()
-        recordings += _simulate_day(scenario, day=day, rng=day_rng)
+        recordings += _simulate_day(scenario, number, rng=day_rng)
     return SimulatedAssay(scenario=scenario, recordings=tuple(recordings))
 
 
 def _simulate_day(
-    scenario: Scenario, *, day: str, rng: np.random.Generator
+    scenario: Scenario, number: int, *, rng: np.random.Generator
 ) -> list[SimulatedRecording]:
     """The recordings of one day; the chambers of the conditions follow each other in turn."""
+    filaments = scenario.filaments_of_day[number]
     shared = _factors("day", scenario, rng=rng)
+    today = [_moved(condition, scenario, "day", rng=rng) for condition in scenario.conditions]
     streams = rng.spawn(len(scenario.conditions))
     own = [
         condition.truth.times(shared).times(_factors("day_condition", scenario, rng=stream))
         for condition, stream in zip(scenario.conditions, streams, strict=True)
     ]
-    chambers = [stream.spawn(scenario.chambers_per_day) for stream in streams]
+    today = [
+        _moved(condition, scenario, "day_condition", rng=stream)
+        for condition, stream in zip(today, streams, strict=True)
+    ]
+    chambers = [stream.spawn(len(filaments)) for stream in streams]
     recordings = []
-    for turn in range(scenario.chambers_per_day):
-        for k, condition in enumerate(scenario.conditions):
+    for turn, in_field in enumerate(filaments):
+        for k, condition in enumerate(today):
             recordings += _simulate_chamber(
-                scenario,
+                replace(scenario, filaments_in_field=in_field),
                 condition,
-                day=day,
-                chamber=f"c{turn * len(scenario.conditions) + k + 1}",
+                day=(_FIRST_DAY + timedelta(days=number)).isoformat(),
+                chamber=f"c{turn * len(today) + k + 1}",
                 day_truth=own[k],
                 rng=chambers[k][turn],
             )
     return recordings
+
+
+def _moved(
+    condition: ScenarioCondition, scenario: Scenario, level: str, *, rng: np.random.Generator
+) -> ScenarioCondition:
+    """The condition with the motile fraction of one unit of a level.
+
+    Drawn again where it would leave 0 to 1, or the other side as far: so the mean stays.
+    """
+    sd = float(getattr(scenario.motile_fraction_spread, level))
+    fraction = scenario.motile_fraction_of(condition)
+    room = min(fraction, 1 - fraction)
+    if sd == 0 or room == 0:
+        return condition
+    step = sd * rng.standard_normal()
+    while abs(step) > room:
+        step = sd * rng.standard_normal()
+    return replace(condition, motile_fraction=fraction + step)
 
 
 def _simulate_chamber(
@@ -289,6 +339,7 @@ def _simulate_chamber(
     rng: np.random.Generator,
 ) -> list[SimulatedRecording]:
     chamber_truth = day_truth.times(_factors("chamber", scenario, rng=rng))
+    condition = _moved(condition, scenario, "chamber", rng=rng)
     expected = scenario.expected_in_field(condition)
     total = sum(expected.values())
     recordings = []

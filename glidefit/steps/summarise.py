@@ -18,6 +18,7 @@ from glidefit.results import (
     DrawnTrack,
     Estimate,
     LevelSpread,
+    ModelCheck,
     TrackResult,
 )
 
@@ -119,7 +120,7 @@ def chambers(
 
 
 def tracks(
-    recordings: Sequence[CleanRecording], speeds: Mapping[str, Floats]
+    recordings: Sequence[CleanRecording], speeds: Mapping[str, tuple[Floats, Floats]]
 ) -> tuple[TrackResult, ...]:
     """What every track says of itself, set-aside ones too."""
     out = []
@@ -128,8 +129,9 @@ def tracks(
         first, last = t.offsets[:-1], t.offsets[1:] - 1
         duration = t.time_s[last] - t.time_s[first]
         net = np.hypot(t.x_um[last] - t.x_um[first], t.y_um[last] - t.y_um[first])
-        speed = np.full(t.n_tracks, np.nan)
-        speed[kept] = speeds.get(r.recording, np.full(int(kept.sum()), np.nan))
+        speed, error = np.full(t.n_tracks, np.nan), np.full(t.n_tracks, np.nan)
+        if r.recording in speeds:
+            speed[kept], error[kept] = speeds[r.recording]
         out += [
             TrackResult(
                 recording=r.recording,
@@ -143,6 +145,7 @@ def tracks(
                 net_advance_um=_short(net[k]),
                 path_um=_short(speed[k] * duration[k]),
                 speed_um_s=_short(speed[k]),
+                speed_error_um_s=_short(error[k]),
             )
             for k in range(t.n_tracks)
         ]
@@ -216,6 +219,79 @@ def generalises(condition: str, combined: Combined, preparations: Sequence[str])
     )
 
 
+def model_checks(
+    innovation: Floats, combined: Combined, columns: Mapping[str, int]
+) -> tuple[ModelCheck, ...]:
+    """Are the likelihood's innovations white and normal, and does the MSD say the same?
+
+    Tolerances are of practical size: among 40,000 positions any trifle is significant.
+
+    Parameters
+    ----------
+    innovation : (n, 2) array
+        Along and across the path, normalised; NaN at the start of each track.
+    """
+    if not len(innovation):
+        return ()
+    there = np.asarray(np.isfinite(innovation).all(axis=1))
+    z = innovation[there]
+    follows = there[1:] & there[:-1]
+    lag_one = float(np.mean(innovation[1:][follows] * innovation[:-1][follows]))
+    square = float(np.mean(z**2))
+    v, v_msd = (float(combined.value[columns[n]]) for n in ("speed", "msd_speed"))
+    d, d_msd = (
+        float(combined.value[columns[n]])
+        for n in ("rotational_diffusion", "msd_rotational_diffusion")
+    )
+    return (
+        ModelCheck(
+            name="size of innovations",
+            value=_short(square),
+            expected=1.0,
+            tolerance=0.1,
+            meaning="Mean square of what each position adds to the prediction from those before "
+            "it, over what the model expects.",
+        ),
+        ModelCheck(
+            name="memory of innovations",
+            value=_short(lag_one / square),
+            expected=0.0,
+            tolerance=0.1,
+            meaning="Correlation of successive innovations; sideways motion, pauses or circling "
+            "leave one.",
+        ),
+        ModelCheck(
+            name="tails of innovations",
+            value=_short(float(np.mean(z**4)) / square**2),
+            expected=3.0,
+            tolerance=1.5,
+            meaning="Fourth moment over the squared second, 3 for a normal distribution; pauses "
+            "and mixtures of filaments make it larger.",
+        ),
+        ModelCheck(
+            name="speed from the MSD",
+            value=_short(v_msd / v),
+            expected=1.0,
+            tolerance=max(0.03, 3 * _relative_error(combined, columns, "msd_speed")),
+            meaning="Speed fitted to the mean squared displacement, over that of the likelihood.",
+        ),
+        ModelCheck(
+            name="D_r from the MSD",
+            value=_short(d_msd / d),
+            expected=1.0,
+            tolerance=max(0.3, 3 * _relative_error(combined, columns, "msd_rotational_diffusion")),
+            meaning="Rotational diffusion fitted to the mean squared displacement, over that of "
+            "the likelihood.",
+        ),
+    )
+
+
+def _relative_error(combined: Combined, columns: Mapping[str, int], name: str) -> float:
+    """Error that the tracks of a condition bring to one of its values; 0 if unknown."""
+    error = combined.level_error["tracks"][columns[name]] / combined.value[columns[name]]
+    return float(error) if np.isfinite(error) else 0.0
+
+
 def problems(
     *,
     estimates: Mapping[str, Estimate],
@@ -224,11 +300,26 @@ def problems(
     msd: Sequence[Curve],
     fit_problems: Sequence[str],
     undecided: int,
+    checks: Sequence[ModelCheck] = (),
+    left_out: int = 0,
+    kept: int = 0,
 ) -> list[str]:
     """What a reader must know before quoting the numbers, in plain words."""
     out = [f"Not fitted, and left out of the means: {problem}." for problem in fit_problems]
     out += _misfit(msd)
     out += _headings_disagree(estimates, combined, columns)
+    out += [
+        f"The active model does not describe these tracks: {check.name} {check.value:.3g}, "
+        f"expected {check.expected:g} within {check.tolerance:.2g}. {check.meaning} Look at the "
+        "tracks before quoting the numbers."
+        for check in checks
+        if not check.holds
+    ]
+    if left_out > 0.05 * kept:
+        out.append(
+            f"{left_out} of {kept} kept tracks are so unlike the others that they did not enter "
+            "the likelihood. Look at them: floating filaments, or two joined to one track?"
+        )
     if undecided:
         out.append(
             f"{undecided} {'track is' if undecided == 1 else 'tracks are'} too short to tell "
@@ -238,7 +329,7 @@ def problems(
 
 
 def _misfit(msd: Sequence[Curve]) -> list[str]:
-    """The fitted curve should pass through its points to 5 % (common practice)."""
+    """The fitted curve should pass through its points to 5 %, which is beyond any use of it."""
     worst, at = 0.0, 0.0
     for c in msd:
         for lag, value, model, used in zip(c.lag_s, c.value, c.model, c.fitted, strict=True):
@@ -277,6 +368,15 @@ def _headings_disagree(
     ]
 
 
+_FITTED = {
+    "likelihood": "fitted to each chamber by maximum likelihood (a Gaussian filter over position, "
+    "heading and the speed of each filament), the speed averaged over filament-frames; the mean "
+    "squared displacement up to a lag of {longest:.3g} s serves as a check.",
+    "msd": "fitted on the logarithmic scale to the mean squared displacement of each chamber up to "
+    "a lag of {longest:.3g} s; pairs of positions were weighted for the edges of the field.",
+}
+
+
 def methods(
     *,
     recordings: Sequence[CleanRecording],
@@ -286,6 +386,7 @@ def methods(
     level: float,
     resamples: int,
     version: str,
+    method: str,
 ) -> str:
     """A methods paragraph to quote."""
     rates = sorted({f"{r.frame_s:.4g}" for r in recordings})
@@ -295,9 +396,8 @@ def methods(
         f"days; frame interval {' and '.join(rates)} s) were analysed with glidefit {version}. "
         f"Of {counted.tracks_seen} tracks {counted.tracks_kept} were kept; set aside: {aside}. "
         "Speed v and rotational diffusion D_r are those of the active Brownian model in two "
-        "dimensions, with diffusion along the heading, localization error and motion blur, fitted "
-        "on the logarithmic scale to the mean squared displacement of each chamber up to a lag of "
-        f"{longest_lag_s:.3g} s; pairs of positions were weighted for the edges of the field. "
+        "dimensions, with diffusion along the heading, localization error and motion blur, "
+        f"{_FITTED[method].format(longest=longest_lag_s)} "
         "Persistence length is v/D_r (decay of the heading correlation along the path), path "
         "persistence length v/(2 D_r) (worm-like chain in two dimensions). Chamber values were "
         "averaged within days and days within the condition. Intervals at the "

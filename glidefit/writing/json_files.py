@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import math
 import re
 from collections.abc import Mapping
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from glidefit.results import StudyResult
+
+if TYPE_CHECKING:
+    from _typeshed import DataclassInstance
 
 # Names of files may hold bytes that are no UTF-8; Python keeps them as lone surrogates, which
 # no UTF-8 file can hold but which JSON can spell.
@@ -18,6 +22,11 @@ _SURROGATE = re.compile("[\ud800-\udfff]")
 def results_text(study: StudyResult) -> str:
     """Text of results.json; read back, it gives the same record and the same text."""
     return _text(study.to_json())
+
+
+def record_text(record: DataclassInstance) -> str:
+    """Text of a record in the order of its fields, NaN as null."""
+    return _text(_plain(dataclasses.asdict(record), where=type(record).__name__))
 
 
 def provenance_text(mapping: Mapping[str, Any]) -> str:

@@ -275,7 +275,7 @@ def _caption(condition: ConditionResult) -> str:
         longest = f", up to {condition.longest_lag_s:.3g} s"
     return (
         "Marks and band: measured. Line and band: fitted model. Shaded, with filled marks: "
-        f"the lags that entered the fit{longest}."
+        f"the lags at which the fit is judged{longest}."
     )
 
 

@@ -13,6 +13,7 @@ from glidefit.results import (
     Drift,
     Estimate,
     LevelSpread,
+    ModelCheck,
     RecordingResult,
     SettingRow,
 )
@@ -126,6 +127,31 @@ def recording_rows(
             sha256=r.sha256,
         )
         for r in recordings
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CheckRow:
+    """One check of the model as text."""
+
+    name: str
+    value: str
+    expected: str
+    meaning: str
+    holds: bool
+
+
+def check_rows(checks: Iterable[ModelCheck]) -> tuple[CheckRow, ...]:
+    """Checks of the model, with what was expected and how far off it may be."""
+    return tuple(
+        CheckRow(
+            name=check.name,
+            value=significant(check.value),
+            expected=f"{check.expected:g} ± {check.tolerance:.2g}",
+            meaning=check.meaning,
+            holds=check.holds,
+        )
+        for check in checks
     )
 
 

@@ -40,7 +40,7 @@ def condition_page(study: StudyResult, condition: ConditionResult) -> str:
     recordings = [r for r in study.recordings if r.condition == condition.condition]
     figures = condition_figures(condition, recordings)
     rows = page_rows.recording_rows(recordings, study.settings)
-    return _render(
+    return render(
         "condition.html.j2",
         study=study,
         condition=condition,
@@ -50,6 +50,7 @@ def condition_page(study: StudyResult, condition: ConditionResult) -> str:
         others=page_rows.other_estimates(condition),
         outcomes=outcomes(condition.counts, study.settings),
         figures=figures,
+        checks=page_rows.check_rows(condition.model_checks),
         spread=page_rows.spread_tables(condition.spread),
         recordings=rows,
         troubled=sum(bool(row.problems) for row in rows),
@@ -65,7 +66,7 @@ def index_page(study: StudyResult) -> str:
         (c, page_rows.main_estimates(c), page_rows.problem_count(c, study.recordings))
         for c in study.conditions
     ]
-    return _render(
+    return render(
         "index.html.j2",
         study=study,
         rows=rows,
@@ -91,7 +92,8 @@ def _level(conditions: Any) -> str:
     return " and ".join(map(percent, levels))
 
 
-def _render(template: str, **values: Any) -> str:
+def render(template: str, **values: Any) -> str:
+    """A page from its template."""
     return _environment().get_template(template).render(**values)
 
 

@@ -415,3 +415,68 @@ def test_an_impossible_condition_is_refused(changes, message):
 def test_an_impossible_spread_is_refused():
     with pytest.raises(ValueError, match="spread of chamber"):
         Spread(chamber=-0.1)
+
+
+# ---- designs that are not the same everywhere ----
+
+
+def test_days_may_have_unequal_chambers():
+    scenario = with_(days=3, chambers_per_day=(1, 3, 2), n_frames=5)
+    chambers = {}
+    for recording in assay_of(scenario).recordings:
+        if recording.condition == "slow":
+            chambers.setdefault(recording.day, []).append(recording.chamber)
+    assert list(map(len, chambers.values())) == [1, 3, 2]
+    same = with_(days=3, chambers_per_day=(2, 2, 2), n_frames=5)
+    for one, other in zip(
+        assay_of(same).recordings, assay_of(with_(days=3, n_frames=5)).recordings, strict=True
+    ):
+        assert bytes_of(one) == bytes_of(other)
+
+
+def test_chambers_may_have_unequal_filaments():
+    scenario = with_(
+        days=2,
+        chambers_per_day=(1, 2),
+        filaments_in_field=((10.0,), (200.0, 50.0)),
+        n_frames=5,
+        conditions=(WILD,),
+    )
+    assert sum(scenario.expected_in_field(WILD).values()) == pytest.approx(260 / 3)
+    seen = [len(r.tracks.frame) / 5 for r in assay_of(scenario).recordings]
+    # Poisson numbers: 4 standard deviations.
+    for found, expected in zip(seen, (10.0, 200.0, 50.0), strict=True):
+        assert abs(found - expected) < 4 * expected**0.5
+
+
+@pytest.mark.parametrize(
+    ("changes", "said"),
+    [
+        ({"days": 2, "chambers_per_day": (1, 2, 1)}, "one for each of the days"),
+        ({"days": 2, "chambers_per_day": (1, 0)}, "must be >= 1"),
+        ({"days": 1, "filaments_in_field": ((5.0,),)}, "a number for each chamber"),
+        ({"days": 1, "filaments_in_field": ((5.0, -1.0),)}, "filaments_in_field >= 0"),
+    ],
+)
+def test_impossible_designs(changes, said):
+    with pytest.raises(ValueError, match=said):
+        with_(**changes)
+
+
+def test_motile_fraction_differs_from_chamber_to_chamber_about_its_mean():
+    half = dataclasses.replace(WILD, motile_fraction=0.7)
+    scenario = with_(
+        days=150,
+        conditions=(half,),
+        n_frames=1,
+        filaments_in_field=1e-9,
+        motile_fraction_spread=Spread(day=0.05, chamber=0.08),
+    )
+    assay = assay_of(scenario, seed=4)
+    by_day = np.array([r.motile_fraction for r in assay.recordings]).reshape(150, 2)
+    assert_mean(by_day.mean(axis=1), 0.7)
+    # The variance of a difference of two is 2 × 0.08²; its own relative error is √(2/150).
+    within = np.diff(by_day, axis=1).var() / 2
+    assert within == pytest.approx(0.08**2, rel=4 * (2 / 150) ** 0.5)
+    assert by_day.min() >= 0.4
+    assert by_day.max() <= 1.0

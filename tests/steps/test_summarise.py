@@ -229,3 +229,76 @@ def test_methods_name_counts_model_and_formulas(result):
     text = result.methods
     for part in ("4 recordings", "2 days", "v/D_r", "v/(2 D_r)", "Student's t", result.generalises):
         assert part in text
+
+
+def checks_of(innovation, *, msd=(0.8, 0.008)):
+    """Checks of a condition of speed 0.8 and D_r 0.008, whose tracks bring errors of 2 and 10 %."""
+    combined = Combined(
+        value=np.array([0.8, 0.008, *msd]),
+        draws=np.zeros((2, 4)),
+        units=np.full(4, 3),
+        covers="days",
+        level_error={"tracks": np.array([0.016, 0.0008, 0.016, 0.0008])},
+        level_units={},
+    )
+    names = ("speed", "rotational_diffusion", "msd_speed", "msd_rotational_diffusion")
+    columns = {name: i for i, name in enumerate(names)}
+    return {c.name: c for c in summarise.model_checks(innovation, combined, columns)}
+
+
+def test_white_normal_innovations_pass_every_check():
+    checks = checks_of(np.random.default_rng(2).standard_normal((20_000, 2)))
+    assert all(check.holds for check in checks.values())
+    # Means of 40,000 squares and products scatter by 0.7 and 0.5 %; 4 of them.
+    assert_allclose(checks["size of innovations"].value, 1.0, atol=0.03)
+    assert_allclose(checks["memory of innovations"].value, 0.0, atol=0.02)
+
+
+@pytest.mark.parametrize(
+    ("spoil", "failed"),
+    [
+        (lambda z: 1.2 * z, "size of innovations"),
+        (lambda z: (z[1:] + 0.5 * z[:-1]) / np.sqrt(1.25), "memory of innovations"),
+        (
+            lambda z: np.where(np.arange(len(z))[:, None] % 20, z, 3 * z) / 1.18,
+            "tails of innovations",
+        ),
+    ],
+)
+def test_each_departure_fails_its_own_check(spoil, failed):
+    checks = checks_of(spoil(np.random.default_rng(3).standard_normal((20_000, 2))))
+    assert [name for name, check in checks.items() if not check.holds] == [failed]
+
+
+def test_a_second_opinion_that_differs_fails_its_check():
+    z = np.random.default_rng(4).standard_normal((20_000, 2))
+    assert checks_of(z, msd=(0.84, 0.010))["D_r from the MSD"].holds
+    assert not checks_of(z, msd=(0.88, 0.008))["speed from the MSD"].holds
+    assert not checks_of(z, msd=(0.8, 0.011))["D_r from the MSD"].holds
+
+
+def test_innovations_do_not_reach_over_the_start_of_a_track():
+    z = np.random.default_rng(5).standard_normal((1000, 2))
+    z[::10] = np.nan
+    assert all(check.holds for check in checks_of(z).values())
+
+
+def test_pauses_fail_the_checks_of_the_active_model():
+    pausing = ScenarioCondition(
+        name="c",
+        speed_um_s=3.0,
+        rotational_diffusion_rad2_s=0.3,
+        stop_rate_per_s=0.5,
+        start_rate_per_s=2.0,
+    )
+    scenario = Scenario(
+        name="s",
+        conditions=(pausing,),
+        frame_s=1 / 15,
+        exposure_s=0.0,
+        n_frames=150,
+        days=2,
+        chambers_per_day=1,
+    )
+    problems = analysed(recordings(scenario)).problems
+    assert any(text.startswith("The active model does not describe") for text in problems), problems

@@ -149,7 +149,8 @@ def test_fitted_points_are_filled_and_the_others_hollow(condition):
     svg = mean_squared_displacement(condition).svg
     assert "fill:var(--paper)" in svg
     assert (
-        "the lags that entered the fit, up to 4 s" in mean_squared_displacement(condition).caption
+        "the lags at which the fit is judged, up to 4 s"
+        in mean_squared_displacement(condition).caption
     )
 
 

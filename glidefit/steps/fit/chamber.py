@@ -3,20 +3,48 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.evidence import ChamberEvidence
 from glidefit.kernels import msd_fit
+from glidefit.kernels.likelihood_fit import STRAIGHT
 from glidefit.kernels.msd_fit import LagCurve, MsdFit
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns
 from glidefit.steps.fit.intervals import Interval, Kept
-from glidefit.steps.fit.track_speeds import frame_speed, lasting_variance
+from glidefit.steps.fit.likelihood import ChamberLikelihood, fit_chamber_likelihood
+from glidefit.steps.fit.track_speeds import frame_speed, lasting_variance, track_speed
 
 Floats = NDArray[np.float64]
 
-_N_PARAMETERS = len(msd_fit.PARAMETERS)
+# Parameters that the likelihood has and the MSD has too, in this order, then the variance of speed.
+_MAIN = [COLUMN[name] for name in STRAIGHT]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ChamberFit:
+    """Evidence of one chamber and what else its fit leaves.
+
+    Parameters
+    ----------
+    evidence : ChamberEvidence
+    track_speeds : dict
+        By recording, speed and its error of each kept track, in µm/s.
+    left_out : int
+        Kept tracks that are not what they seem and did not enter the likelihood.
+    innovation : (k, 2) array
+        Normalised innovations of the likelihood; empty without one.
+    problem : str
+        Why the chamber could not be fitted.
+    """
+
+    evidence: ChamberEvidence
+    track_speeds: dict[str, tuple[Floats, Floats]]
+    left_out: int
+    innovation: Floats
+    problem: str
 
 
 def fit_chamber(
@@ -25,45 +53,98 @@ def fit_chamber(
     columns: Sequence[CurveColumns],
     *,
     longest_s: float,
-    start: dict[str, float] | None,
-) -> tuple[ChamberEvidence, str]:
-    """Fit one chamber; its evidence, and the problem if it could not be fitted."""
+    pooled: MsdFit,
+    method: str,
+) -> ChamberFit:
+    """Fit one chamber."""
     parts = [(c, i, i.of(members)) for c, i in zip(columns, intervals, strict=True)]
     parts = [(c, i, places) for c, i, places in parts if places]
     # Rows of the evidence follow the curves, interval by interval.
     ordered = [i.members[place] for _, i, places in parts for place in places]
     curves = [i.curve(places) for _, i, places in parts]
-    result = msd_fit.fit_msd([curve.up_to(longest_s) for curve in curves], start=start)
+    from_msd = msd_fit.fit_msd([curve.up_to(longest_s) for curve in curves], start=_start(pooled))
+    lasting = lasting_variance(ordered, longest_s=longest_s, parameters=from_msd.values)
     n_tracks = sum(one.tracks.n_tracks for one in ordered)
     width = columns[-1].heading_model.stop
     values, influence = np.full(width, np.nan), np.zeros((n_tracks, width))
-    values[:_N_PARAMETERS], influence[:, :_N_PARAMETERS] = result.values, result.influence
-    _set(
-        values,
-        influence,
-        "speed_variance",
-        lasting_variance(ordered, longest_s=longest_s, parameters=result.values),
-    )
+    values[_MAIN], influence[:, _MAIN] = _by_msd(from_msd, lasting)
+    for i, name in enumerate(("msd_speed", "msd_rotational_diffusion")):
+        _set(values, influence, name, (from_msd.values[i], from_msd.influence[:, i]))
+    own, left_out, problem = None, 0, from_msd.problem
+    if method == "likelihood":
+        own = fit_chamber_likelihood(ordered, start=_likely_start(from_msd, pooled, lasting[0]))
+        values[_MAIN], influence[:, _MAIN] = own.values, own.influence
+        problem = own.problem
+        left_out = 0 if problem else int((~own.used & (_counts(ordered) >= 2)).sum())
     _set(values, influence, "frame_speed", _mean_frame_speed(ordered))
     row = 0
     for (column, interval, places), curve in zip(parts, curves, strict=True):
         rows = slice(row, row + len(curve.sums))
         row = rows.stop
-        _fill_msd(values, influence, rows, curve, column, result)
+        _fill_msd(values, influence, rows, curve, column)
         cosines = [interval.cosines[place] for place in places]
         _fill_heading(values, influence, rows, cosines, column)
-    own = ordered[0].source
-    problem = f"{own.day}, chamber {own.chamber}: {result.problem}" if result.problem else ""
-    return (
-        ChamberEvidence(
-            day=own.day,
-            chamber=own.chamber,
+    source = ordered[0].source
+    return ChamberFit(
+        evidence=ChamberEvidence(
+            day=source.day,
+            chamber=source.chamber,
             values=values,
             influence=influence,
             recording_of_track=_field_of_track(ordered),
         ),
-        problem,
+        track_speeds=_track_speeds(ordered, own, longest_s, pooled.values),
+        left_out=left_out,
+        innovation=np.empty((0, 2)) if own is None else own.innovation,
+        problem=f"{source.day}, chamber {source.chamber}: {problem}" if problem else "",
     )
+
+
+def _start(pooled: MsdFit) -> dict[str, float] | None:
+    """Parameters of all chambers together as the first guess of each."""
+    if pooled.problem:
+        return None
+    return dict(zip(msd_fit.PARAMETERS, map(float, pooled.values), strict=True))
+
+
+def _likely_start(own: MsdFit, pooled: MsdFit, variance: float) -> dict[str, float] | None:
+    """First guess of the likelihood, inside its limits; None where the MSD knows nothing."""
+    known = own if not own.problem else pooled
+    if known.problem:
+        return None
+    speed, turning, along, noise = map(float, known.values)
+    return {
+        "speed": speed,
+        "rotational_diffusion": max(turning, 0.1 * abs(turning)),
+        "longitudinal_diffusion": max(along, 0.1 * abs(along)),
+        "localization_variance": max(noise, 0.1 * abs(noise)),
+        "speed_variance": float(np.fmax(variance, (0.05 * speed) ** 2)),
+    }
+
+
+def _by_msd(fit: MsdFit, lasting: tuple[float, Floats]) -> tuple[Floats, Floats]:
+    values = np.append(fit.values, lasting[0])
+    return values, np.concatenate([fit.influence, lasting[1][:, None]], axis=1)
+
+
+def _counts(members: Sequence[Kept]) -> NDArray[np.int64]:
+    return np.concatenate([one.tracks.n_positions for one in members])
+
+
+def _track_speeds(
+    members: Sequence[Kept], own: ChamberLikelihood | None, longest_s: float, pooled: Floats
+) -> dict[str, tuple[Floats, Floats]]:
+    """Speed of each track and its error, by recording; without a likelihood from one lag."""
+    out, row = {}, 0
+    for one in members:
+        rows = slice(row, row + one.tracks.n_tracks)
+        row = rows.stop
+        if own is None or own.problem:
+            speed = track_speed(one, longest_s=longest_s, parameters=pooled)
+            out[one.source.recording] = speed, np.full(len(speed), np.nan)
+        else:
+            out[one.source.recording] = own.speed[rows], own.speed_error[rows]
+    return out
 
 
 def _set(values: Floats, influence: Floats, name: str, known: tuple[float, Floats]) -> None:
@@ -87,30 +168,38 @@ def _mean_frame_speed(members: Sequence[Kept]) -> tuple[float, Floats]:
 
 
 def _fill_msd(
-    values: Floats,
-    influence: Floats,
-    rows: slice,
-    curve: LagCurve,
-    columns: CurveColumns,
-    result: MsdFit,
+    values: Floats, influence: Floats, rows: slice, curve: LagCurve, columns: CurveColumns
 ) -> None:
+    """Measured MSD, and that of the fitted parameters."""
     values[columns.msd] = curve.value
     influence[rows, columns.msd] = np.nan_to_num(curve.influence * curve.value)
-    if result.problem:
+    main = values[_MAIN]
+    if not np.all(np.isfinite(main)):
         return
-    named = dict(zip(msd_fit.PARAMETERS, map(float, result.values), strict=True))
-    values[columns.model] = msd_fit.model_values(curve, named)
-    influence[:, columns.model] = result.influence @ _slope(curve, named)
+    values[columns.model] = _predicted(curve, main)
+    influence[:, columns.model] = influence[:, _MAIN] @ _slope(curve, main)
 
 
-def _slope(curve: LagCurve, named: dict[str, float]) -> Floats:
-    """Derivative of the model at the lags by each parameter, (4, l)."""
+def _predicted(curve: LagCurve, main: Floats) -> Floats:
+    """The MSD knows the mean square of the speed: mean squared plus variance."""
+    speed, *others, variance = map(float, main)
+    named = dict(zip(msd_fit.PARAMETERS, [_root(speed**2 + variance), *others], strict=True))
+    return msd_fit.model_values(curve, named)
+
+
+def _root(square: float) -> float:
+    return float(np.sqrt(max(square, 0.0)))
+
+
+def _slope(curve: LagCurve, main: Floats) -> Floats:
+    """Derivative of the predicted MSD by each parameter, (5, l)."""
     slope = []
-    for name in msd_fit.PARAMETERS:
-        step = 1e-5 * max(abs(named[name]), 1e-9)
-        above = msd_fit.model_values(curve, named | {name: named[name] + step})
-        below = msd_fit.model_values(curve, named | {name: named[name] - step})
-        slope.append((above - below) / (2 * step))
+    for i, value in enumerate(main):
+        step = np.zeros(len(main))
+        step[i] = 1e-5 * max(abs(value), 1e-9)
+        slope.append(
+            (_predicted(curve, main + step) - _predicted(curve, main - step)) / 2 / step[i]
+        )
     return np.array(slope)
 
 

@@ -14,7 +14,6 @@ from glidefit.settings import FitSettings
 from glidefit.steps.fit.chamber import fit_chamber
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns, curve_columns
 from glidefit.steps.fit.intervals import FEWEST_FRAMES, Interval, Kept, intervals
-from glidefit.steps.fit.track_speeds import track_speed
 
 Floats = NDArray[np.float64]
 
@@ -34,8 +33,14 @@ class ConditionFit:
         Over the kept tracks.
     curves : tuple of CurveColumns
         One for each frame interval.
-    track_speed_um_s : dict of str: (k,) array
-        By recording, of its kept tracks.
+    track_speeds : dict of str: ((k,) array, (k,) array)
+        By recording, speed of its kept tracks and its error, in µm/s.
+    left_out : int
+        Kept tracks that are not what they seem and did not enter the likelihood.
+    innovation : (n, 2) array
+        Normalised innovations of all tracks in the likelihood; empty without one.
+    method : str
+        "likelihood" or "msd".
     longest_lag_s : float
     pooled : (4,) array
         Parameters of all tracks in one pot, for reading speeds off single lags.
@@ -46,7 +51,10 @@ class ConditionFit:
     columns: dict[str, int]
     chambers: tuple[ChamberEvidence, ...]
     curves: tuple[CurveColumns, ...]
-    track_speed_um_s: dict[str, Floats]
+    track_speeds: dict[str, tuple[Floats, Floats]]
+    left_out: int
+    innovation: Floats
+    method: str
     longest_lag_s: float
     pooled: Floats
     model: str
@@ -66,29 +74,32 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
     parts = intervals(kept)
     longest, pooled = _longest_lag(parts, settings)
     columns = curve_columns(parts, longest)
-    start = None
-    if not pooled.problem:
-        start = dict(zip(msd_fit.PARAMETERS, map(float, pooled.values), strict=True))
     chambers: dict[tuple[str, str], list[Kept]] = {}
     for one in kept:
         chambers.setdefault((one.source.day, one.source.chamber), []).append(one)
     results = [
-        fit_chamber(members, parts, columns, longest_s=longest, start=start)
+        fit_chamber(
+            members, parts, columns, longest_s=longest, pooled=pooled, method=settings.method
+        )
         for members in chambers.values()
     ]
-    variance = _speed_variance([evidence for evidence, _ in results])
+    variance = _speed_variance([result.evidence for result in results])
+    corrected = ["msd_speed"] if settings.method == "likelihood" else ["msd_speed", "speed"]
+    speeds: dict[str, tuple[Floats, Floats]] = {}
+    for result in results:
+        speeds |= result.track_speeds
     return ConditionFit(
         columns=COLUMN,
-        chambers=tuple(_mean_speed(evidence, variance) for evidence, _ in results),
+        chambers=tuple(_mean_speed(r.evidence, variance, corrected) for r in results),
         curves=columns,
-        track_speed_um_s={
-            one.source.recording: track_speed(one, longest_s=longest, parameters=pooled.values)
-            for one in kept
-        },
+        track_speeds=speeds,
+        left_out=sum(result.left_out for result in results),
+        innovation=np.concatenate([result.innovation for result in results]),
+        method=settings.method,
         longest_lag_s=longest,
         pooled=pooled.values,
         model="active",
-        problems=tuple(problem for _, problem in results if problem),
+        problems=tuple(result.problem for result in results if result.problem),
     )
 
 
@@ -113,12 +124,15 @@ def _speed_variance(chambers: Sequence[ChamberEvidence]) -> float:
     return max(float(np.nanmean(each)), 0.0) if np.any(np.isfinite(each)) else 0.0
 
 
-def _mean_speed(evidence: ChamberEvidence, variance: float) -> ChamberEvidence:
+def _mean_speed(
+    evidence: ChamberEvidence, variance: float, names: Sequence[str]
+) -> ChamberEvidence:
     """The MSD knows √⟨v²⟩; the mean speed is a little less where filaments differ."""
     values, influence = evidence.values.copy(), evidence.influence.copy()
-    column = COLUMN["speed"]
-    square = values[column] ** 2 - variance
-    if square > 0:  # false for NaN too
-        influence[:, column] *= values[column] / np.sqrt(square)
-        values[column] = np.sqrt(square)
+    for name in names:
+        column = COLUMN[name]
+        square = values[column] ** 2 - variance
+        if square > 0:  # false for NaN too
+            influence[:, column] *= values[column] / np.sqrt(square)
+            values[column] = np.sqrt(square)
     return replace(evidence, values=values, influence=influence)

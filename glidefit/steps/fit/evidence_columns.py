@@ -19,6 +19,8 @@ SCALARS = (
     "speed_variance",
     "frame_speed",
     "heading_diffusion",
+    "msd_speed",  # the second opinion
+    "msd_rotational_diffusion",
 )
 COLUMN = {name: i for i, name in enumerate(SCALARS)}
 

@@ -1,0 +1,222 @@
+"""The active-Brownian model fitted to a chamber by its likelihood, and where it does not hold."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from glidefit.kernels.gliding_data import GlidingData, first_guess
+from glidefit.kernels.likelihood_fit import STRAIGHT, LikelihoodFit, fit_likelihood
+from glidefit.steps.fit.intervals import Kept
+
+Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
+
+# A track is not what it seems (floating, several filaments joined) when its log likelihood falls
+# short of the usual by more than chance: the shortfall of n positions from their median has mean
+# 0.31 n and variance n, as half a χ² with 2 degrees of freedom. One such track could rule the sum.
+_MEAN_SHORTFALL, _SHORTFALL_SDS, _SHORTFALL_FLOOR = 0.31, 6.0, 10.0
+# Positions at the start of a track whose density is compared with that of the same position in
+# other tracks: the heading is not known there yet.
+_N_FIRST = 8
+# A track's own speed is asked of it under a population this wide, relative to the mean, so that
+# what comes out is hardly drawn towards the others.
+_WIDE = 0.5
+_ROUNDS = 3
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ChamberLikelihood:
+    """Optimum of one chamber.
+
+    Parameters
+    ----------
+    values : (5,) array
+        In the order of `STRAIGHT`; the speed is the mean over filament-frames.
+    influence : (m, 5) array
+        What each track adds to them when drawn once more; 0 for tracks left out.
+    speed, speed_error : (m,) arrays
+        Of each track by itself, in µm/s; NaN where it cannot tell.
+    used : (m,) array of bool
+        False for tracks that are not what they seem.
+    innovation : (k, 2) array
+        Normalised innovations of the tracks used, NaN at the start of each track.
+    problem : str
+    """
+
+    values: Floats
+    influence: Floats
+    speed: Floats
+    speed_error: Floats
+    used: Bools
+    innovation: Floats
+    problem: str
+
+
+def fit_chamber_likelihood(
+    members: Sequence[Kept], *, start: Mapping[str, float] | None
+) -> ChamberLikelihood:
+    """Maximise the likelihood of a chamber's kept tracks, strange ones left out.
+
+    Recordings of several frame intervals are fitted each by itself and averaged by positions.
+
+    Parameters
+    ----------
+    members : sequence of Kept
+    start : mapping or None
+        First guess by the names of `STRAIGHT`; taken from the tracks if None.
+    """
+    groups: dict[tuple[float, float], list[int]] = {}
+    for i, one in enumerate(members):
+        key = (round(one.source.frame_s, 6), round(one.source.exposure_s, 6))
+        groups.setdefault(key, []).append(i)
+    parts = {
+        tuple(places): _fit_group([members[i] for i in places], start) for places in groups.values()
+    }
+    if len(parts) == 1:
+        return next(iter(parts.values()))
+    return _averaged(members, parts)
+
+
+def _averaged(
+    members: Sequence[Kept], parts: Mapping[tuple[int, ...], ChamberLikelihood]
+) -> ChamberLikelihood:
+    first = np.concatenate([[0], np.cumsum([one.tracks.n_tracks for one in members])])
+    n = int(first[-1])
+    values, influence = np.zeros(len(STRAIGHT)), np.zeros((n, len(STRAIGHT)))
+    speed, error = np.full(n, np.nan), np.full(n, np.nan)
+    used = np.zeros(n, dtype=bool)
+    total = sum(len(one.tracks.frame) for one in members)
+    for places, part in parts.items():
+        rows = np.concatenate([np.arange(first[i], first[i + 1]) for i in places])
+        share = sum(len(members[i].tracks.frame) for i in places) / total
+        values += share * part.values
+        influence[rows] = share * part.influence
+        speed[rows], error[rows], used[rows] = part.speed, part.speed_error, part.used
+    return ChamberLikelihood(
+        values=values,
+        influence=influence,
+        speed=speed,
+        speed_error=error,
+        used=used,
+        innovation=np.concatenate([part.innovation for part in parts.values()]),
+        problem="; ".join(part.problem for part in parts.values() if part.problem),
+    )
+
+
+def _fit_group(members: Sequence[Kept], start: Mapping[str, float] | None) -> ChamberLikelihood:
+    counts = np.concatenate([one.tracks.n_positions for one in members])
+    used = counts >= 2
+    data = _data(members, used)
+    if start is None:
+        guess = first_guess(data)
+        start = {name: guess[name] for name in STRAIGHT}
+    used[used] = ~_strange(data, start)
+    for _ in range(_ROUNDS):
+        data = _data(members, used)
+        fit = fit_likelihood(data, start=start)
+        if fit.problem:
+            return _failed(len(counts), fit.problem)
+        start = _named(fit)
+        strange = _strange(data, start)
+        if not strange.any():
+            break
+        used[used] = ~strange
+    return _with_mean_over_frames(data, fit, counts, used)
+
+
+def _data(members: Sequence[Kept], used: Bools) -> GlidingData:
+    """The tracks used, one recording after the other."""
+    rows = np.repeat(used, np.concatenate([one.tracks.n_positions for one in members]))
+    counts = np.concatenate([one.tracks.n_positions for one in members])[used]
+    time = np.concatenate([one.tracks.time_s for one in members])[rows]
+    offsets = np.concatenate([[0], np.cumsum(counts)])
+    wait = np.diff(time)
+    wait[offsets[1:-1] - 1] = np.inf
+    exposure = float(np.median([one.source.exposure_s for one in members]))
+    return GlidingData(
+        time_s=time,
+        x=np.concatenate([one.tracks.x_um for one in members])[rows],
+        y=np.concatenate([one.tracks.y_um for one in members])[rows],
+        offsets=offsets,
+        exposure_s=min(exposure, float(wait.min(initial=np.inf))),
+    )
+
+
+def _named(fit: LikelihoodFit) -> dict[str, float]:
+    return dict(zip(fit.names, map(float, fit.values), strict=True))
+
+
+def _strange(data: GlidingData, values: Mapping[str, float]) -> Bools:
+    """Tracks that these parameters make far less likely than the others, (m,)."""
+    density = data.filtered(values).log_density
+    place = np.arange(len(density)) - np.repeat(data.offsets[:-1], np.diff(data.offsets))
+    usual = np.zeros(len(density))
+    for j in range(1, _N_FIRST + 1):
+        these = place == j if j < _N_FIRST else place >= j
+        usual[these] = np.median(density[these]) if these.any() else 0.0
+    shortfall = np.add.reduceat(usual - density, data.offsets[:-1])
+    n = np.diff(data.offsets)
+    limit = _MEAN_SHORTFALL * n + _SHORTFALL_SDS * np.sqrt(n) + _SHORTFALL_FLOOR
+    return np.asarray(shortfall > limit)
+
+
+def _with_mean_over_frames(
+    data: GlidingData, fit: LikelihoodFit, counts: NDArray[np.int64], used: Bools
+) -> ChamberLikelihood:
+    """The optimum with the mean speed taken over filament-frames.
+
+    The likelihood weights tracks nearly alike; fast filaments enter the field more often and
+    leave it sooner, so that a mean over tracks is too fast. The mean over the filaments present
+    at a moment weights each track's own speed by its positions.
+    """
+    named = _named(fit)
+    wide = named | {"speed_variance": (_WIDE * named["speed"]) ** 2}
+    filtered = data.filtered(wide)
+    own, error = _own_speed(filtered.speed_mean, filtered.speed_sd, named["speed"])
+    tells = np.isfinite(own) & (error < _WIDE * named["speed"])
+    weight = np.where(tells, counts[used], 0).astype(np.float64)
+    influence = np.zeros((len(counts), len(STRAIGHT)))
+    influence[used] = fit.influence
+    values = fit.values.copy()
+    if weight.sum() > 0:
+        values[0] = float(weight @ np.where(tells, own, 0.0) / weight.sum())
+        influence[used, 0] = weight * (np.where(tells, own, 0.0) - values[0]) / weight.sum()
+    speed, speed_error = np.full(len(counts), np.nan), np.full(len(counts), np.nan)
+    speed[used], speed_error[used] = np.where(tells, own, np.nan), np.where(tells, error, np.nan)
+    return ChamberLikelihood(
+        values=values,
+        influence=influence,
+        speed=speed,
+        speed_error=speed_error,
+        used=used,
+        innovation=data.filtered(named).innovation,
+        problem="",
+    )
+
+
+def _own_speed(mean: Floats, sd: Floats, population: float) -> tuple[Floats, Floats]:
+    """A track's own speed and error: its posterior with the wide prior divided out."""
+    prior = 1 / (_WIDE * population) ** 2
+    with np.errstate(divide="ignore", invalid="ignore"):
+        precision = 1 / sd**2 - prior
+        own = (mean / sd**2 - population * prior) / precision
+        return np.where(precision > 0, own, np.nan), np.where(
+            precision > 0, precision**-0.5, np.nan
+        )
+
+
+def _failed(n_tracks: int, problem: str) -> ChamberLikelihood:
+    none = np.full(n_tracks, np.nan)
+    return ChamberLikelihood(
+        values=np.full(len(STRAIGHT), np.nan),
+        influence=np.zeros((n_tracks, len(STRAIGHT))),
+        speed=none,
+        speed_error=none,
+        used=np.zeros(n_tracks, dtype=bool),
+        innovation=np.empty((0, 2)),
+        problem=problem,
+    )

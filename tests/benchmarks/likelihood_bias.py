@@ -1,0 +1,211 @@
+"""Bias and scatter of the likelihood fit beside the Cramér-Rao bound and the MSD fit.
+
+    python -P tests/benchmarks/likelihood_bias.py [--experiments 200] [--case kinesin] [--seed 1]
+
+Every experiment is 40 clean tracks (of 200 frames where nothing else is said), seen in every frame.
+Both fits take the same tracks; the bound knows localization error, blur, and no position or
+orientation. The times of both fits are those of this run.
+"""
+
+from __future__ import annotations
+
+import argparse
+import time
+from dataclasses import dataclass
+
+import numpy as np
+
+from glidefit.kernels import displacements, msd_fit
+from glidefit.kernels.bound import (
+    BOUND_PARAMETERS,
+    least_relative_error_of_ratio,
+    least_standard_errors,
+    track_information,
+)
+from glidefit.kernels.gliding_data import GlidingData
+from glidefit.kernels.likelihood_fit import CIRCLING, STRAIGHT, fit_likelihood
+from glidefit.steps.simulate import ScenarioCondition, clean_tracks
+from glidefit.tracks import Tracks
+
+N_TRACKS = 40
+SHOWN = ("speed", "rotational_diffusion", "v/D_r", "turning_rate")
+_BEND = 0.15  # D_r t at the longest lag of the MSD fit
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Case:
+    """One kind of tracks and how it is fitted."""
+
+    speed: float = 0.8
+    rotational_diffusion: float = 0.008
+    longitudinal_diffusion: float = 0.003
+    frame_s: float = 1 / 3
+    localization_error: float = 0.03
+    exposure_s: float = 0.0
+    n_frames: int = 200
+    turning_rate: float = 0.0
+    turning_rate_sd: float = 0.0
+    speed_spread: float = 0.0  # relative
+    free: tuple[str, ...] = STRAIGHT
+
+
+_ACTIN = {
+    "speed": 4.0,
+    "rotational_diffusion": 0.2,
+    "longitudinal_diffusion": 0.05,
+    "frame_s": 0.1,
+    "localization_error": 0.04,
+}
+_TURNING = (*STRAIGHT, "turning_rate")
+CASES = {
+    "kinesin": Case(),
+    "actin": Case(**_ACTIN),
+    "actin, 90 % exposed": Case(
+        **_ACTIN | {"rotational_diffusion": 0.4, "frame_s": 0.05}, exposure_s=0.045
+    ),
+    "slow": Case(speed=0.05, rotational_diffusion=0.001, longitudinal_diffusion=1e-4, frame_s=2.0),
+    "circling": Case(turning_rate=0.05, free=_TURNING),
+    "circling either way": Case(turning_rate_sd=0.05, free=CIRCLING),
+    "speeds spread by 10 %": Case(speed_spread=0.1),
+    "kinesin, 20 frames": Case(n_frames=20),
+    "kinesin, 50 frames": Case(n_frames=50),
+    "actin, 20 frames": Case(**_ACTIN, n_frames=20),
+    "actin, 50 frames": Case(**_ACTIN, n_frames=50),
+    "kinesin, error of half a step": Case(localization_error=0.133),
+    "actin, error of half a step": Case(**_ACTIN | {"localization_error": 0.2}),
+}
+
+
+def simulated(case: Case, rng: np.random.Generator) -> Tracks:
+    condition = ScenarioCondition(
+        name="c",
+        speed_um_s=case.speed,
+        rotational_diffusion_rad2_s=case.rotational_diffusion,
+        longitudinal_diffusion_um2_s=case.longitudinal_diffusion,
+        turning_rate_rad_s=case.turning_rate,
+        turning_rate_sd_rad_s=case.turning_rate_sd,
+    )
+    return clean_tracks(
+        N_TRACKS,
+        case.n_frames,
+        condition=condition,
+        frame_s=case.frame_s,
+        exposure_s=case.exposure_s,
+        localization_error_um=case.localization_error,
+        speed_spread=case.speed_spread,
+        rng=rng,
+    )
+
+
+def by_likelihood(tracks: Tracks, case: Case) -> dict[str, float]:
+    data = GlidingData(
+        time_s=tracks.time_s,
+        x=tracks.x_um,
+        y=tracks.y_um,
+        offsets=tracks.offsets,
+        exposure_s=case.exposure_s,
+    )
+    fit = fit_likelihood(data, free=case.free)
+    return dict(zip(fit.names, map(float, fit.values), strict=True))
+
+
+def by_msd(tracks: Tracks, case: Case) -> dict[str, float]:
+    lags = msd_fit.log_spaced_lags(int(0.6 * case.n_frames))
+    sums, counts = displacements.track_sums(
+        tracks.frame,
+        tracks.offsets,
+        [tracks.x_um, tracks.y_um],
+        lags=lags,
+        of_grids=displacements.lag_sums,
+    )
+    curve = msd_fit.LagCurve(
+        lag_s=lags * case.frame_s, sums=sums, counts=counts, exposure_s=case.exposure_s
+    )
+    lag_s = curve.lag_s
+    _, fit = msd_fit.longest_lag(
+        [curve], bend=_BEND, at_least=float(lag_s[7]), at_most=float(lag_s[-1])
+    )
+    return dict(zip(msd_fit.PARAMETERS, map(float, fit.values), strict=True))
+
+
+def bounds(case: Case) -> dict[str, float]:
+    """Least standard errors of an experiment, relative except of the turning rate."""
+    information = track_information(
+        np.arange(case.n_frames) * case.frame_s,
+        speed=case.speed,
+        rotational_diffusion=case.rotational_diffusion,
+        localization_error=case.localization_error,
+        longitudinal_diffusion=case.longitudinal_diffusion,
+        speed_spread=case.speed_spread * case.speed,
+        turning_rate_spread=case.turning_rate_sd,
+        exposure_s=case.exposure_s,
+    )
+    # What is 0 without spread is taken as known: the fit cannot go below 0 either.
+    unknown = [
+        name
+        for name in BOUND_PARAMETERS
+        if name in case.free
+        and (name != "speed_variance" or case.speed_spread > 0)
+        and (name != "turning_rate_variance" or case.turning_rate_sd > 0)
+    ]
+    errors = least_standard_errors(information, unknown=unknown, n_tracks=N_TRACKS)
+    known = {"speed": case.speed, "rotational_diffusion": case.rotational_diffusion}
+    return {
+        "speed": errors["speed"] / case.speed,
+        "rotational_diffusion": errors["rotational_diffusion"] / case.rotational_diffusion,
+        "v/D_r": least_relative_error_of_ratio(
+            information, unknown=unknown, n_tracks=N_TRACKS, **known
+        ),
+    } | ({"turning_rate": errors["turning_rate"]} if "turning_rate" in errors else {})
+
+
+def deviation(values: dict[str, float], name: str, case: Case) -> float:
+    """Relative to the truth; of the turning rate itself, in rad/s."""
+    if name == "turning_rate":
+        return values.get(name, np.nan) - case.turning_rate
+    if name == "v/D_r":
+        truth = case.speed / case.rotational_diffusion
+        return values["speed"] / values["rotational_diffusion"] / truth - 1
+    return values[name] / getattr(case, name) - 1
+
+
+def run(case: Case, *, n_experiments: int, seed: int) -> None:
+    bound = bounds(case)
+    found: dict[str, list[dict[str, float]]] = {"likelihood": [], "MSD": []}
+    spent = dict.fromkeys(found, 0.0)
+    for rng in np.random.default_rng(seed).spawn(n_experiments):
+        tracks = simulated(case, rng)
+        for method, fit in (("likelihood", by_likelihood), ("MSD", by_msd)):
+            begun = time.process_time()
+            found[method].append(fit(tracks, case))
+            spent[method] += time.process_time() - begun
+    for method, values in found.items():
+        print(f"  {method}, {spent[method] / n_experiments:.2f} s of one thread a fit")
+        for name in bound:
+            off = np.array([deviation(one, name, case) for one in values])
+            good = np.isfinite(off)
+            if not good.any():
+                continue
+            mean, error = off[good].mean(), off[good].std(ddof=1) / np.sqrt(good.sum())
+            ratio = np.sqrt((off[good] ** 2).mean()) / bound[name]
+            unit, scale = ("rad/s", 1) if name == "turning_rate" else ("%", 100)
+            print(
+                f"    {name:21s} bias {scale * mean:+.4g} ± {scale * error:.2g} {unit}, "
+                f"RMSE / bound {ratio:.2f} ± {ratio / np.sqrt(2 * good.sum()):.2f}"
+                + ("" if good.all() else f", {np.sum(~good)} fits failed")
+            )
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser()
+    parser.add_argument("--experiments", type=int, default=200)
+    parser.add_argument("--case", choices=tuple(CASES))
+    parser.add_argument("--seed", type=int, default=1)
+    options = parser.parse_args()
+    for name in [options.case] if options.case else CASES:
+        print(f"{name}: {options.experiments} experiments", flush=True)
+        run(CASES[name], n_experiments=options.experiments, seed=options.seed)
+
+
+if __name__ == "__main__":
+    main()
