@@ -19,6 +19,7 @@ from glidefit.results import (
     Estimate,
     RecordingResult,
     StudyResult,
+    TrackResult,
 )
 
 NUMBERS = st.just(math.nan) | st.floats(allow_nan=False, allow_infinity=False)
@@ -176,3 +177,26 @@ def test_numbers_of_a_recording_end_in_their_unit():
     floats = [name for name, hint in hints.items() if hint is float]
     assert floats
     assert all(name.endswith(("_s", "_um")) for name in floats)
+
+
+def test_results_from_before_a_key_was_added_are_still_read():
+    track = TrackResult(
+        recording="r",
+        day="d",
+        chamber="1",
+        track="1",
+        kept=True,
+        set_aside_reason="",
+        n_positions=3,
+        duration_s=1.0,
+        net_advance_um=1.0,
+        path_um=1.0,
+        speed_um_s=1.0,
+        speed_error_um_s=0.1,
+    )
+    data = glidefit.results._plain(track)
+    del data["speed_error_um_s"]
+    assert math.isnan(glidefit.results._record(TrackResult, data).speed_error_um_s)
+    del data["speed_um_s"]
+    with pytest.raises(ValueError, match="TrackResult: key 'speed_um_s' is missing"):
+        glidefit.results._record(TrackResult, data)
