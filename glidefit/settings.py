@@ -99,6 +99,11 @@ class FitSettings(_Section):
         "",
         "What the numbers come from; the mean squared displacement stands beside the likelihood.",
     )
+    model: Literal["auto", "active", "circling"] = setting(
+        "auto",
+        "",
+        "Whether paths turn steadily; chosen by practical size and at the level of chambers.",
+    )
     bend: float = setting(
         0.15,
         "rad²",

@@ -106,6 +106,8 @@ def condition_numbers(
     motile = uncertainty.combine(gliding, settings=interval, rng=rng)
     known = uncertainty.estimates(combined, fitted.columns, settings=interval)
     known |= uncertainty.estimates(motile, motility.COLUMNS, settings=interval)
+    if fitted.model != "circling":
+        del known["turning_rate_rad_s"]
     known["smallest_speed_um_s"] = summarise.smallest_speed(recordings, level=interval.level)
     return ConditionNumbers(
         fitted=fitted, gliding=gliding, combined=combined, motile=motile, estimates=known
@@ -182,7 +184,7 @@ def _condition(
         by_chamber.setdefault((e.day, e.chamber), {}).update(
             {name: float(e.values[i]) for name, i in motility.COLUMNS.items()}
         )
-    checks = summarise.model_checks(fitted.innovation, combined, fitted.columns)
+    checks = summarise.model_checks(fitted.innovation, combined, fitted.columns, model=fitted.model)
     problems = summarise.problems(
         estimates=estimates,
         combined=combined,
@@ -191,6 +193,7 @@ def _condition(
         fit_problems=fitted.problems,
         undecided=sum(int((r.clean.kept & ~r.clean.decided).sum()) for r in recordings),
         checks=checks,
+        model=fitted.model,
         left_out=fitted.left_out,
         kept=counted.tracks_kept,
     )

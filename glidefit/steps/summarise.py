@@ -27,7 +27,7 @@ Floats = NDArray[np.float64]
 _NOT_IN_MODEL = {
     "mean_speed_um_s": "not fitted: the active model knows no pauses",
     "running_fraction": "not fitted: the active model knows no pauses",
-    "turning_rate_rad_s": "not fitted: the active model knows no circling",
+    "turning_rate_rad_s": "not fitted: no steady turning of a size that matters was seen",
 }
 _SPREAD_OF = {
     "speed_um_s": "speed",
@@ -220,7 +220,7 @@ def generalises(condition: str, combined: Combined, preparations: Sequence[str])
 
 
 def model_checks(
-    innovation: Floats, combined: Combined, columns: Mapping[str, int]
+    innovation: Floats, combined: Combined, columns: Mapping[str, int], *, model: str = "active"
 ) -> tuple[ModelCheck, ...]:
     """Are the likelihood's innovations white and normal, and does the MSD say the same?
 
@@ -238,12 +238,7 @@ def model_checks(
     follows = there[1:] & there[:-1]
     lag_one = float(np.mean(innovation[1:][follows] * innovation[:-1][follows]))
     square = float(np.mean(z**2))
-    v, v_msd = (float(combined.value[columns[n]]) for n in ("speed", "msd_speed"))
-    d, d_msd = (
-        float(combined.value[columns[n]])
-        for n in ("rotational_diffusion", "msd_rotational_diffusion")
-    )
-    return (
+    white = (
         ModelCheck(
             name="size of innovations",
             value=_short(square),
@@ -268,6 +263,20 @@ def model_checks(
             meaning="Fourth moment over the squared second, 3 for a normal distribution; pauses "
             "and mixtures of filaments make it larger.",
         ),
+    )
+    if model == "circling":  # which the fit to the MSD does not know
+        return white
+    return white + _second_opinion(combined, columns)
+
+
+def _second_opinion(combined: Combined, columns: Mapping[str, int]) -> tuple[ModelCheck, ...]:
+    """Does the fit to the mean squared displacement say the same?"""
+    v, v_msd = (float(combined.value[columns[n]]) for n in ("speed", "msd_speed"))
+    d, d_msd = (
+        float(combined.value[columns[n]])
+        for n in ("rotational_diffusion", "msd_rotational_diffusion")
+    )
+    return (
         ModelCheck(
             name="speed from the MSD",
             value=_short(v_msd / v),
@@ -301,13 +310,15 @@ def problems(
     fit_problems: Sequence[str],
     undecided: int,
     checks: Sequence[ModelCheck] = (),
+    model: str = "active",
     left_out: int = 0,
     kept: int = 0,
 ) -> list[str]:
     """What a reader must know before quoting the numbers, in plain words."""
     out = [f"Not fitted, and left out of the means: {problem}." for problem in fit_problems]
     out += _misfit(msd)
-    out += _headings_disagree(estimates, combined, columns)
+    if model == "active":
+        out += _headings_disagree(estimates, combined, columns)
     out += [
         f"The active model does not describe these tracks: {check.name} {check.value:.3g}, "
         f"expected {check.expected:g} within {check.tolerance:.2g}. {check.meaning} Look at the "

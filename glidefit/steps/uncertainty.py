@@ -217,6 +217,7 @@ RULES = {
         back=_root,
         unresolved="not resolved: filaments differ by less than the measurement can tell",
     ),
+    "turning_rate_rad_s": _Rule(columns=("turning_rate",), scale=lambda w: w),
     "frame_speed_um_s": _Rule(columns=("frame_speed",), scale=lambda v: v, below=0.0),
     "motile_fraction": _Rule(
         columns=("motile_fraction",), scale=lambda f: f, below=0.0, beyond=1.0

@@ -10,17 +10,21 @@ from numpy.typing import NDArray
 
 from glidefit.evidence import ChamberEvidence
 from glidefit.kernels import msd_fit
+from glidefit.kernels.active_brownian import circling_msd
+from glidefit.kernels.likelihood_fit import CIRCLING as CIRCLING_NAMES
 from glidefit.kernels.likelihood_fit import STRAIGHT
 from glidefit.kernels.msd_fit import LagCurve, MsdFit
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns
 from glidefit.steps.fit.intervals import Interval, Kept
 from glidefit.steps.fit.likelihood import ChamberLikelihood, fit_chamber_likelihood
+from glidefit.steps.fit.model_choice import CIRCLING, Turning
 from glidefit.steps.fit.track_speeds import frame_speed, lasting_variance, track_speed
 
 Floats = NDArray[np.float64]
 
 # Parameters that the likelihood has and the MSD has too, in this order, then the variance of speed.
 _MAIN = [COLUMN[name] for name in STRAIGHT]
+_CIRCLING = [COLUMN[name] for name in CIRCLING_NAMES]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -55,6 +59,7 @@ def fit_chamber(
     longest_s: float,
     pooled: MsdFit,
     method: str,
+    turning: Turning,
 ) -> ChamberFit:
     """Fit one chamber."""
     parts = [(c, i, i.of(members)) for c, i in zip(columns, intervals, strict=True)]
@@ -72,8 +77,12 @@ def fit_chamber(
         _set(values, influence, name, (from_msd.values[i], from_msd.influence[:, i]))
     own, left_out, problem = None, 0, from_msd.problem
     if method == "likelihood":
-        own = fit_chamber_likelihood(ordered, start=_likely_start(from_msd, pooled, lasting[0]))
-        values[_MAIN], influence[:, _MAIN] = own.values, own.influence
+        circles = turning.model == CIRCLING
+        names = CIRCLING_NAMES if circles else STRAIGHT
+        start = _likely_start(from_msd, pooled, lasting[0], turning if circles else None)
+        own = fit_chamber_likelihood(ordered, names=names, start=start)
+        there = [COLUMN[name] for name in names]
+        values[there], influence[:, there] = own.values, own.influence
         problem = own.problem
         left_out = 0 if problem else int((~own.used & (_counts(ordered) >= 2)).sum())
     _set(values, influence, "frame_speed", _mean_frame_speed(ordered))
@@ -107,15 +116,25 @@ def _start(pooled: MsdFit) -> dict[str, float] | None:
     return dict(zip(msd_fit.PARAMETERS, map(float, pooled.values), strict=True))
 
 
-def _likely_start(own: MsdFit, pooled: MsdFit, variance: float) -> dict[str, float] | None:
+def _likely_start(
+    own: MsdFit, pooled: MsdFit, variance: float, turning: Turning | None
+) -> dict[str, float] | None:
     """First guess of the likelihood, inside its limits; None where the MSD knows nothing."""
     known = own if not own.problem else pooled
     if known.problem:
         return None
-    speed, turning, along, noise = map(float, known.values)
-    return {
+    speed, bend, along, noise = map(float, known.values)
+    circling = {}
+    if turning is not None:
+        # Circles look like diffusion to the MSD: most of its D_r is theirs.
+        bend = 0.2 * abs(bend)
+        circling = {
+            "turning_rate": turning.rate,
+            "turning_rate_variance": max(turning.variance, 0.01 * turning.rate**2),
+        }
+    return circling | {
         "speed": speed,
-        "rotational_diffusion": max(turning, 0.1 * abs(turning)),
+        "rotational_diffusion": max(bend, 0.1 * abs(bend)),
         "longitudinal_diffusion": max(along, 0.1 * abs(along)),
         "localization_variance": max(noise, 0.1 * abs(noise)),
         "speed_variance": float(np.fmax(variance, (0.05 * speed) ** 2)),
@@ -173,32 +192,51 @@ def _fill_msd(
     """Measured MSD, and that of the fitted parameters."""
     values[columns.msd] = curve.value
     influence[rows, columns.msd] = np.nan_to_num(curve.influence * curve.value)
-    main = values[_MAIN]
-    if not np.all(np.isfinite(main)):
+    names = _CIRCLING if np.isfinite(values[_CIRCLING]).all() else _MAIN
+    fitted = values[names]
+    if not np.all(np.isfinite(fitted)):
         return
-    values[columns.model] = _predicted(curve, main)
-    influence[:, columns.model] = influence[:, _MAIN] @ _slope(curve, main)
+    values[columns.model] = _predicted(curve, fitted)
+    influence[:, columns.model] = influence[:, names] @ _slope(curve, fitted)
 
 
-def _predicted(curve: LagCurve, main: Floats) -> Floats:
-    """The MSD knows the mean square of the speed: mean squared plus variance."""
-    speed, *others, variance = map(float, main)
+def _predicted(curve: LagCurve, fitted: Floats) -> Floats:
+    """MSD of the fitted parameters, 5 of active or 7 of circling paths.
+
+    It knows the mean square of the speed, mean squared plus variance, and averages over the
+    turning rates of the population.
+    """
+    speed, *others, variance = map(float, fitted[: len(_MAIN)])
     named = dict(zip(msd_fit.PARAMETERS, [_root(speed**2 + variance), *others], strict=True))
-    return msd_fit.model_values(curve, named)
+    straight = msd_fit.model_values(curve, named)
+    if len(fitted) == len(_MAIN):
+        return straight
+    return straight + _circling(curve, named, rate=fitted[5], spread=_root(fitted[6]))
+
+
+def _circling(curve: LagCurve, named: dict[str, float], *, rate: float, spread: float) -> Floats:
+    """What steady turning takes from the MSD; its blur in one exposure is neglected."""
+    path = {"speed": named["speed"], "rotational_diffusion": named["rotational_diffusion"]}
+    node, weight = np.polynomial.hermite_e.hermegauss(9)
+    turned = [
+        circling_msd(curve.lag_s, turning_rate=float(rate + spread * z), **path) for z in node
+    ]
+    bent = weight @ np.array(turned) / weight.sum()
+    return np.asarray(bent - circling_msd(curve.lag_s, turning_rate=0.0, **path))
 
 
 def _root(square: float) -> float:
     return float(np.sqrt(max(square, 0.0)))
 
 
-def _slope(curve: LagCurve, main: Floats) -> Floats:
-    """Derivative of the predicted MSD by each parameter, (5, l)."""
+def _slope(curve: LagCurve, fitted: Floats) -> Floats:
+    """Derivative of the predicted MSD by each parameter, (p, l)."""
     slope = []
-    for i, value in enumerate(main):
-        step = np.zeros(len(main))
+    for i, value in enumerate(fitted):
+        step = np.zeros(len(fitted))
         step[i] = 1e-5 * max(abs(value), 1e-9)
         slope.append(
-            (_predicted(curve, main + step) - _predicted(curve, main - step)) / 2 / step[i]
+            (_predicted(curve, fitted + step) - _predicted(curve, fitted - step)) / 2 / step[i]
         )
     return np.array(slope)
 

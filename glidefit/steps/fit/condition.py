@@ -14,6 +14,7 @@ from glidefit.settings import FitSettings
 from glidefit.steps.fit.chamber import fit_chamber
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns, curve_columns
 from glidefit.steps.fit.intervals import FEWEST_FRAMES, Interval, Kept, intervals
+from glidefit.steps.fit.model_choice import NO_TURNING, Turning, look_for_turning
 
 Floats = NDArray[np.float64]
 
@@ -45,6 +46,9 @@ class ConditionFit:
     pooled : (4,) array
         Parameters of all tracks in one pot, for reading speeds off single lags.
     model : str
+        "active" or "circling".
+    turning : Turning
+        The evidence from which the model was chosen.
     problems : tuple of str
     """
 
@@ -58,6 +62,7 @@ class ConditionFit:
     longest_lag_s: float
     pooled: Floats
     model: str
+    turning: Turning
     problems: tuple[str, ...]
 
 
@@ -77,9 +82,16 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
     chambers: dict[tuple[str, str], list[Kept]] = {}
     for one in kept:
         chambers.setdefault((one.source.day, one.source.chamber), []).append(one)
+    turning = _turning(list(chambers.values()), pooled, settings)
     results = [
         fit_chamber(
-            members, parts, columns, longest_s=longest, pooled=pooled, method=settings.method
+            members,
+            parts,
+            columns,
+            longest_s=longest,
+            pooled=pooled,
+            method=settings.method,
+            turning=turning,
         )
         for members in chambers.values()
     ]
@@ -98,9 +110,27 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         method=settings.method,
         longest_lag_s=longest,
         pooled=pooled.values,
-        model="active",
+        model=turning.model,
+        turning=turning,
         problems=tuple(result.problem for result in results if result.problem),
     )
+
+
+def _turning(
+    chambers: Sequence[Sequence[Kept]], pooled: msd_fit.MsdFit, settings: FitSettings
+) -> Turning:
+    """Evidence of steady turning; a model that is forced stands whatever it says."""
+    typical = [one.source.clean.typical_speed_um_s for them in chambers for one in them]
+    if settings.method == "msd" or pooled.problem or not np.any(np.isfinite(typical)):
+        return NO_TURNING
+    found = look_for_turning(
+        chambers,
+        speed=float(np.nanmedian(typical)),
+        rotational_diffusion=float(pooled.values[1]),
+    )
+    if settings.model == "auto":
+        return found
+    return replace(found, forced=settings.model)
 
 
 def _longest_lag(parts: Sequence[Interval], settings: FitSettings) -> tuple[float, msd_fit.MsdFit]:

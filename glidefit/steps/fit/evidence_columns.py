@@ -21,6 +21,8 @@ SCALARS = (
     "heading_diffusion",
     "msd_speed",  # the second opinion
     "msd_rotational_diffusion",
+    "turning_rate",  # of circling paths
+    "turning_rate_variance",
 )
 COLUMN = {name: i for i, name in enumerate(SCALARS)}
 

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.kernels.gliding_data import GlidingData, first_guess
-from glidefit.kernels.likelihood_fit import STRAIGHT, LikelihoodFit, fit_likelihood
+from glidefit.kernels.likelihood_fit import LikelihoodFit, fit_likelihood
 from glidefit.steps.fit.intervals import Kept
 
 Floats = NDArray[np.float64]
@@ -34,9 +34,9 @@ class ChamberLikelihood:
 
     Parameters
     ----------
-    values : (5,) array
-        In the order of `STRAIGHT`; the speed is the mean over filament-frames.
-    influence : (m, 5) array
+    values : (p,) array
+        In the order of the names asked for; the speed, first, is the mean over filament-frames.
+    influence : (m, p) array
         What each track adds to them when drawn once more; 0 for tracks left out.
     speed, speed_error : (m,) arrays
         Of each track by itself, in µm/s; NaN where it cannot tell.
@@ -57,7 +57,7 @@ class ChamberLikelihood:
 
 
 def fit_chamber_likelihood(
-    members: Sequence[Kept], *, start: Mapping[str, float] | None
+    members: Sequence[Kept], *, names: Sequence[str], start: Mapping[str, float] | None
 ) -> ChamberLikelihood:
     """Maximise the likelihood of a chamber's kept tracks, strange ones left out.
 
@@ -66,15 +66,18 @@ def fit_chamber_likelihood(
     Parameters
     ----------
     members : sequence of Kept
+    names : sequence of str
+        Parameters to fit, the speed first.
     start : mapping or None
-        First guess by the names of `STRAIGHT`; taken from the tracks if None.
+        First guess of each; taken from the tracks if None.
     """
     groups: dict[tuple[float, float], list[int]] = {}
     for i, one in enumerate(members):
         key = (round(one.source.frame_s, 6), round(one.source.exposure_s, 6))
         groups.setdefault(key, []).append(i)
     parts = {
-        tuple(places): _fit_group([members[i] for i in places], start) for places in groups.values()
+        tuple(places): _fit_group([members[i] for i in places], names, start)
+        for places in groups.values()
     }
     if len(parts) == 1:
         return next(iter(parts.values()))
@@ -86,7 +89,8 @@ def _averaged(
 ) -> ChamberLikelihood:
     first = np.concatenate([[0], np.cumsum([one.tracks.n_tracks for one in members])])
     n = int(first[-1])
-    values, influence = np.zeros(len(STRAIGHT)), np.zeros((n, len(STRAIGHT)))
+    width = len(next(iter(parts.values())).values)
+    values, influence = np.zeros(width), np.zeros((n, width))
     speed, error = np.full(n, np.nan), np.full(n, np.nan)
     used = np.zeros(n, dtype=bool)
     total = sum(len(one.tracks.frame) for one in members)
@@ -107,19 +111,21 @@ def _averaged(
     )
 
 
-def _fit_group(members: Sequence[Kept], start: Mapping[str, float] | None) -> ChamberLikelihood:
+def _fit_group(
+    members: Sequence[Kept], names: Sequence[str], start: Mapping[str, float] | None
+) -> ChamberLikelihood:
     counts = np.concatenate([one.tracks.n_positions for one in members])
     used = counts >= 2
     data = _data(members, used)
     if start is None:
         guess = first_guess(data)
-        start = {name: guess[name] for name in STRAIGHT}
+        start = {name: guess[name] for name in names}
     used[used] = ~_strange(data, start)
     for _ in range(_ROUNDS):
         data = _data(members, used)
-        fit = fit_likelihood(data, start=start)
+        fit = fit_likelihood(data, free=names, start=start)
         if fit.problem:
-            return _failed(len(counts), fit.problem)
+            return _failed(len(counts), len(names), fit.problem)
         start = _named(fit)
         strange = _strange(data, start)
         if not strange.any():
@@ -179,7 +185,7 @@ def _with_mean_over_frames(
     own, error = _own_speed(filtered.speed_mean, filtered.speed_sd, named["speed"])
     tells = np.isfinite(own) & (error < _WIDE * named["speed"])
     weight = np.where(tells, counts[used], 0).astype(np.float64)
-    influence = np.zeros((len(counts), len(STRAIGHT)))
+    influence = np.zeros((len(counts), len(fit.values)))
     influence[used] = fit.influence
     values = fit.values.copy()
     if weight.sum() > 0:
@@ -209,11 +215,11 @@ def _own_speed(mean: Floats, sd: Floats, population: float) -> tuple[Floats, Flo
         )
 
 
-def _failed(n_tracks: int, problem: str) -> ChamberLikelihood:
+def _failed(n_tracks: int, n_names: int, problem: str) -> ChamberLikelihood:
     none = np.full(n_tracks, np.nan)
     return ChamberLikelihood(
-        values=np.full(len(STRAIGHT), np.nan),
-        influence=np.zeros((n_tracks, len(STRAIGHT))),
+        values=np.full(n_names, np.nan),
+        influence=np.zeros((n_tracks, n_names)),
         speed=none,
         speed_error=none,
         used=np.zeros(n_tracks, dtype=bool),
