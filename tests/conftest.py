@@ -9,6 +9,7 @@ import importlib.util
 import os
 import shutil
 
+import hypothesis
 import numpy as np
 import pytest
 from scipy import stats
@@ -26,6 +27,10 @@ from glidefit.results import (
     StudyResult,
     TrackResult,
 )
+
+# How long an example takes says more of the machine than of the code.
+hypothesis.settings.register_profile("glidefit", deadline=None)
+hypothesis.settings.load_profile("glidefit")
 
 _HAS_BROWSER = bool(shutil.which("chromium")) and bool(importlib.util.find_spec("playwright"))
 _left_out = 0

@@ -29,6 +29,8 @@ _NOT_IN_MODEL = {
     "running_fraction": "not fitted: the active model knows no pauses",
     "turning_rate_rad_s": "not fitted: no steady turning of a size that matters was seen",
 }
+# Fewer innovations say nothing of their distribution.
+_FEWEST_INNOVATIONS = 200
 _SPREAD_OF = {
     "speed_um_s": "speed",
     "rotational_diffusion_rad2_s": "rotational_diffusion",
@@ -231,10 +233,10 @@ def model_checks(
     innovation : (n, 2) array
         Along and across the path, normalised; NaN at the start of each track.
     """
-    if not len(innovation):
-        return ()
     there = np.asarray(np.isfinite(innovation).all(axis=1))
     z = innovation[there]
+    if len(z) < _FEWEST_INNOVATIONS:
+        return ()
     follows = there[1:] & there[:-1]
     lag_one = float(np.mean(innovation[1:][follows] * innovation[:-1][follows]))
     square = float(np.mean(z**2))

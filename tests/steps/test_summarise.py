@@ -302,3 +302,8 @@ def test_pauses_fail_the_checks_of_the_active_model():
     )
     problems = analysed(recordings(scenario)).problems
     assert any(text.startswith("The active model does not describe") for text in problems), problems
+
+
+def test_too_few_innovations_say_nothing():
+    assert checks_of(np.full((500, 2), np.nan)) == {}
+    assert checks_of(np.zeros((0, 2))) == {}
