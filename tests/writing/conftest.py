@@ -21,6 +21,7 @@ from glidefit.results import (
     Drift,
     Estimate,
     LevelSpread,
+    ModelCheck,
     Ratio,
     RecordingResult,
     SettingRow,
@@ -243,6 +244,22 @@ def make_condition(
             longest_lag_s=4.0,
             heading_diffusion_rad2_s=0.0498,
             methods=METHODS,
+            model_checks=(
+                ModelCheck(
+                    name="size of innovations",
+                    value=1.004,
+                    expected=1.0,
+                    tolerance=0.1,
+                    meaning="Mean square of what each position adds to the prediction.",
+                ),
+                ModelCheck(
+                    name="D_r from the MSD",
+                    value=1.8,
+                    expected=1.0,
+                    tolerance=0.3,
+                    meaning="Rotational diffusion fitted to the MSD, over that of the likelihood.",
+                ),
+            ),
         ),
         tuple(recordings),
     )

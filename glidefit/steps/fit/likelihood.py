@@ -25,7 +25,7 @@ _N_FIRST = 8
 # A track's own speed is asked of it under a population this wide, relative to the mean, so that
 # what comes out is hardly drawn towards the others.
 _WIDE = 0.5
-_ROUNDS = 3
+_ROUNDS = 5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -115,22 +115,23 @@ def _fit_group(
     members: Sequence[Kept], names: Sequence[str], start: Mapping[str, float] | None
 ) -> ChamberLikelihood:
     counts = np.concatenate([one.tracks.n_positions for one in members])
-    used = counts >= 2
-    data = _data(members, used)
+    judged = counts >= 2
+    every = _data(members, judged)
     if start is None:
-        guess = first_guess(data)
+        guess = first_guess(every)
         start = {name: guess[name] for name in names}
-    used[used] = ~_strange(data, start)
+    used = np.zeros(len(counts), dtype=bool)
     for _ in range(_ROUNDS):
+        before = used.copy()
+        # All are judged anew: what is strange to a poor first guess need not stay so.
+        used[judged] = ~_strange(every, start)
+        if np.array_equal(used, before):
+            break
         data = _data(members, used)
         fit = fit_likelihood(data, free=names, start=start)
         if fit.problem:
             return _failed(len(counts), len(names), fit.problem)
         start = _named(fit)
-        strange = _strange(data, start)
-        if not strange.any():
-            break
-        used[used] = ~strange
     return _with_mean_over_frames(data, fit, counts, used)
 
 
