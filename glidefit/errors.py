@@ -54,6 +54,25 @@ class InputErrors(GlidefitError):  # noqa: N818
         return InputErrors, (self.errors,)
 
 
+def input_errors(results: Iterable[object]) -> list[InputError]:
+    """What is wrong with the input among results of which each may be an error.
+
+    Raises
+    ------
+    GlidefitError
+        If one of them is an error of another kind.
+    """
+    errors: list[InputError] = []
+    for result in results:
+        if isinstance(result, InputError):
+            errors.append(result)
+        elif isinstance(result, InputErrors):
+            errors += result.errors
+        elif isinstance(result, GlidefitError):
+            raise result
+    return errors
+
+
 class NothingLeft(GlidefitError):  # noqa: N818  (the state is the name a user knows)
     """Cleaning left no track to fit; the text names the rule and by how much it failed."""
 

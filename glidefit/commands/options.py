@@ -14,7 +14,7 @@ from glidefit.commands.wording import counted
 from glidefit.settings import Declaration, SourcedSettings, declarations, resolve
 
 if TYPE_CHECKING:
-    from glidefit.pipeline.run import Done
+    from glidefit.pipeline.run import Done, Job
 
 _Command = TypeVar("_Command", bound=Callable[..., Any])
 
@@ -113,6 +113,43 @@ def count_workers(workers: int | None) -> int:
     import os
 
     return workers or os.cpu_count() or 1
+
+
+def analysis(command: _Command) -> _Command:
+    """Sheets and options of the commands that analyse them; `job` reads what was given."""
+    command = with_settings()(command)
+    command = seed_option(workers_option(command))
+    command = click.option(
+        "--out",
+        type=click.Path(path_type=Path, readable=False),
+        metavar="DIR",
+        help="Folder for what comes out.  (default: reports/<sheet name>)",
+    )(command)
+    return click.argument("sheets", nargs=-1, required=True, type=SHEET, metavar="SHEET...")(
+        command
+    )
+
+
+def job(
+    *,
+    sheets: tuple[Path, ...],
+    out: Path | None,
+    workers: int | None,
+    seed: int,
+    settings_file: Path | None,
+    **given: Any,
+) -> Job:
+    """What a command with the options of `analysis` was asked to do."""
+    from glidefit.pipeline.run import Job
+
+    return Job(
+        sheets=sheets,
+        out=out or default_out(sheets),
+        settings=sourced(settings_file, given),
+        seed=seed,
+        workers=count_workers(workers),
+        command=command_line(),
+    )
 
 
 def last_line(done: Done, page: str) -> str:

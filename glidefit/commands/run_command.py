@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from pathlib import Path
 from typing import Any
 
 import click
@@ -11,35 +10,9 @@ from glidefit.commands import options
 
 
 @click.command("run")
-@click.argument("sheets", nargs=-1, required=True, type=options.SHEET, metavar="SHEET...")
-@click.option(
-    "--out",
-    type=click.Path(path_type=Path, readable=False),
-    metavar="DIR",
-    help="Folder for pages and tables.  (default: reports/<sheet name>)",
-)
-@options.workers_option
-@options.seed_option
-@options.with_settings()
-def command(
-    sheets: tuple[Path, ...],
-    out: Path | None,
-    workers: int | None,
-    seed: int,
-    settings_file: Path | None,
-    **given: Any,
-) -> None:
+@options.analysis
+def command(**given: Any) -> None:
     """Analyse assay sheets and write pages, tables and results."""
-    from glidefit.pipeline.run import Job, run
+    from glidefit.pipeline.run import run
 
-    done = run(
-        Job(
-            sheets=sheets,
-            out=out or options.default_out(sheets),
-            settings=options.sourced(settings_file, given),
-            seed=seed,
-            workers=options.count_workers(workers),
-            command=options.command_line(),
-        )
-    )
-    click.echo(options.last_line(done, "index.html"))
+    click.echo(options.last_line(run(options.job(**given)), "index.html"))

@@ -2,18 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 from glidefit.assay import Assay
-from glidefit.errors import GlidefitError, InputError, InputErrors
+from glidefit.errors import InputError, input_errors
 from glidefit.pipeline.prepare import Task, detect, open_video, track
 from glidefit.running.progress import progress
 from glidefit.running.workers import run_all
 from glidefit.settings import SourcedSettings
+from glidefit.steps.plausible import implausible
 
 # Frames of a video that are looked at.
 _LOOK = 25
@@ -69,21 +69,9 @@ def check(sheet: Path, *, settings: SourcedSettings, workers: int) -> Checked:
     return Checked(
         assay=assay,
         looks=tuple(r for r in results if isinstance(r, Look)),
-        errors=tuple(_errors(results)),
+        errors=tuple(input_errors(results)),
         notes=(*sheet_notes(assay), *_design_notes(assay)),
     )
-
-
-def _errors(results: Sequence[Look | GlidefitError]) -> list[InputError]:
-    errors: list[InputError] = []
-    for result in results:
-        if isinstance(result, InputError):
-            errors.append(result)
-        elif isinstance(result, InputErrors):
-            errors += result.errors
-        elif isinstance(result, GlidefitError):
-            raise result
-    return errors
 
 
 def _design_notes(assay: Assay) -> list[str]:
@@ -129,7 +117,15 @@ def _look_at_table(task: Task) -> Look:
         seen=f"{tracked.tracks.n_tracks} tracks",
         localization_error_um=cleaned.noise_um,
         quick_speed_um_s=cleaned.typical_speed_um_s,
-        notes=tracked.notes,
+        notes=(
+            *tracked.notes,
+            *implausible(
+                speed_um_s=cleaned.typical_speed_um_s,
+                noise_um=cleaned.noise_um,
+                frame_s=tracked.frame_s,
+                max_speed_um_s=task.settings.link.max_speed,
+            ),
+        ),
     )
 
 
@@ -170,5 +166,13 @@ def _look_at_video(task: Task) -> Look:
         seen=f"{len(spots.frame) / spots.n_frames:.1f} spots a frame",
         localization_error_um=noise,
         quick_speed_um_s=speed,
-        notes=tuple(notes),
+        notes=(
+            *notes,
+            *implausible(
+                speed_um_s=speed,
+                noise_um=noise,
+                frame_s=video.frame_s,
+                max_speed_um_s=settings.link.max_speed,
+            ),
+        ),
     )

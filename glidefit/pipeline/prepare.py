@@ -14,6 +14,7 @@ from glidefit.evidence import REASONS, CleanRecording
 from glidefit.results import RecordingResult
 from glidefit.running.checksums import sha256
 from glidefit.settings import Settings
+from glidefit.steps.plausible import implausible
 from glidefit.tracks import Detections, Tracks
 
 if TYPE_CHECKING:
@@ -114,7 +115,15 @@ def prepare(task: Task) -> Prepared:
             tracks_seen=cleaned.tracks.n_tracks,
             tracks_kept=int(cleaned.kept.sum()),
             set_aside=counted,
-            problems=tracked.notes,
+            problems=(
+                *tracked.notes,
+                *implausible(
+                    speed_um_s=cleaned.typical_speed_um_s,
+                    noise_um=cleaned.noise_um,
+                    frame_s=tracked.frame_s,
+                    max_speed_um_s=settings.link.max_speed,
+                ),
+            ),
         ),
     )
 
@@ -144,7 +153,17 @@ def _from_table(task: Task) -> Tracked:
         exposure_s=exposure,
         exposure_source=source,
         field_um=(width, height),
-        notes=table.notes,
+        notes=(*table.notes, *_unused_pixel(recording, table.pixel_um)),
+    )
+
+
+def _unused_pixel(recording: Recording, used: float) -> tuple[str, ...]:
+    """A pixel size beside a table in µm: perhaps its positions are pixels after all."""
+    if recording.pixel_um is None or not np.isnan(used):
+        return ()
+    return (
+        f"the table has positions in µm, so pixel_um = {recording.pixel_um:g} of the sheet is not "
+        "used; if they are pixels, call the columns x_px and y_px",
     )
 
 

@@ -58,7 +58,7 @@ def read_recipe(path: Path) -> tuple[Part, ...]:
     """
     from glidefit.reading.settings_file import read_settings
 
-    data = read_settings(path)
+    data = read_settings(path, expected="a recipe in TOML")
     parts = data.pop("part", None)
     errors = [_unknown(path.name, key, ["part"]) for key in data]
     if not isinstance(parts, list) or not parts:

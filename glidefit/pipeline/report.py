@@ -35,6 +35,11 @@ def report(run: Path) -> StudyResult:
     result = read_results(source)
     _check_slugs(source, result)
     target = run if run.is_dir() else run.parent
+    if (target / "conditions").is_symlink():
+        raise OutputError(
+            f"{target / 'conditions'}: this is a link to another folder, which is not written to. "
+            "Delete the link."
+        )
     for name, text in pages_of(result).items():
         _replace(target / name, text)
     return result

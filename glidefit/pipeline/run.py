@@ -11,7 +11,7 @@ from typing import Any
 
 import glidefit
 from glidefit.assay import Assay, Recording
-from glidefit.errors import GlidefitError, InputError, InputErrors
+from glidefit.errors import InputError, InputErrors, input_errors
 from glidefit.pipeline.prepare import Prepared, Task, prepare
 from glidefit.pipeline.study import study
 from glidefit.results import StudyResult
@@ -225,15 +225,7 @@ def collect(
         results = run_all(
             work, tasks, workers=workers, name=lambda task: task.recording.name, done=done
         )
-    errors: list[InputError] = []
-    for result in results:
-        if isinstance(result, InputError):
-            errors.append(result)
-        elif isinstance(result, InputErrors):
-            errors += result.errors
-        elif isinstance(result, GlidefitError):
-            raise result
-    if errors:
+    if errors := input_errors(results):
         raise InputErrors(errors)
     return list(results)
 

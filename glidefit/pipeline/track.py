@@ -14,7 +14,7 @@ from glidefit.pipeline.prepare import FIELD_COLUMNS, Task, Tracked, track
 from glidefit.pipeline.run import collect, read_assay
 from glidefit.running import folder as run_folder
 from glidefit.running.checksums import sha256
-from glidefit.settings import SourcedSettings, declarations
+from glidefit.settings import ColumnSettings, SourcedSettings, declarations
 
 MARK = "provenance.json"
 _FORMAT = "glidefit-tracks/1"
@@ -35,12 +35,19 @@ def track_videos(
 ) -> TrackedVideos:
     """Detect and link every video of the sheets; write tables and a sheet for `glidefit fit`.
 
-    Rows that are track tables already are listed in the new sheet as they are.
+    Rows that are track tables already are listed in the new sheet as they are; where settings name
+    their columns otherwise, they are written anew, so that one sheet can be read with one setting.
     """
     run_folder.check_output(out, holds=_is_ours)
     assay = read_assay(sheets)
-    tasks = [Task(recording=r, settings=settings.values) for r in assay.recordings if r.is_video]
-    if not tasks:
+    renamed = settings.values.columns != ColumnSettings()
+    tasks = [
+        Task(recording=r, settings=settings.values)
+        for r in assay.recordings
+        if r.is_video or renamed
+    ]
+    n_videos = sum(r.is_video for r in assay.recordings)
+    if not n_videos:
         raise InputError(
             assay.path.name,
             "none of its recordings is a video",
@@ -54,7 +61,7 @@ def track_videos(
         run_folder.write_files(fresh, files)
     return TrackedVideos(
         sheet=out / "assay.csv",
-        n_videos=len(tasks),
+        n_videos=n_videos,
         n_tracks=sum(t.tracks.n_tracks for t in tracked),
         notes=tuple(
             f"{task.recording.name}: {note}"

@@ -202,18 +202,21 @@ def spread_by_level(combined: Combined, columns: Mapping[str, int]) -> tuple[Lev
 def generalises(condition: str, combined: Combined, preparations: Sequence[str]) -> str:
     """One sentence: to what the intervals generalise."""
     days, n_chambers = combined.level_units["days"], combined.level_units["chambers"]
+    few = ""
+    if (days if combined.covers == "days" else n_chambers) == 2:
+        few = " Two say little of their spread: a third would make the intervals far narrower."
     if combined.covers == "days":
         named = {p for p in preparations if p}
         if len(named) == 1 and all(preparations):
             return (
                 f"The intervals cover other days with the same preparation ({named.pop()}): "
-                f"{days} days repeat the day, not the preparation."
+                f"{days} days repeat the day, not the preparation.{few}"
             )
-        return f"The intervals cover other days like these {days}."
+        return f"The intervals cover other days like these {days}.{few}"
     if combined.covers == "chambers":
         return (
             f"The {n_chambers} chambers are of one day: the intervals cover other chambers of that "
-            "day, not other days. Film on further days to say more."
+            f"day, not other days. Film on further days to say more.{few}"
         )
     return (
         "There is one chamber, so no interval can be given: how much another chamber would differ "
@@ -278,19 +281,21 @@ def _second_opinion(combined: Combined, columns: Mapping[str, int]) -> tuple[Mod
         float(combined.value[columns[n]])
         for n in ("rotational_diffusion", "msd_rotational_diffusion")
     )
+    sure_v = max(0.03, 3 * _relative_error(combined, columns, "msd_speed"))
+    sure_d = max(0.3, 3 * _relative_error(combined, columns, "msd_rotational_diffusion"))
     return (
         ModelCheck(
             name="speed from the MSD",
-            value=_short(v_msd / v),
+            value=_short(v_msd / v) if sure_v < 1 and v > 0 else NAN,
             expected=1.0,
-            tolerance=max(0.03, 3 * _relative_error(combined, columns, "msd_speed")),
+            tolerance=sure_v,
             meaning="Speed fitted to the mean squared displacement, over that of the likelihood.",
         ),
         ModelCheck(
             name="D_r from the MSD",
-            value=_short(d_msd / d),
+            value=_short(d_msd / d) if sure_d < 1 and d > 0 else NAN,
             expected=1.0,
-            tolerance=max(0.3, 3 * _relative_error(combined, columns, "msd_rotational_diffusion")),
+            tolerance=sure_d,
             meaning="Rotational diffusion fitted to the mean squared displacement, over that of "
             "the likelihood.",
         ),

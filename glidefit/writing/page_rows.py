@@ -147,7 +147,9 @@ def check_rows(checks: Iterable[ModelCheck]) -> tuple[CheckRow, ...]:
         CheckRow(
             name=check.name,
             value=significant(check.value),
-            expected=f"{check.expected:g} ± {check.tolerance:.2g}",
+            expected="cannot tell"
+            if math.isnan(check.value)
+            else f"{check.expected:g} ± {check.tolerance:.2g}",
             meaning=check.meaning,
             holds=check.holds,
         )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 
 import pytest
 
@@ -47,7 +48,7 @@ def test_folder_without_results(desk):
     )
 
 
-@pytest.mark.parametrize("slug", ["../../x", "/tmp/x", "A", "", 5])
+@pytest.mark.parametrize("slug", ["../../x", "/x", "A", "", 5])
 def test_results_that_name_a_page_outside_the_folder(desk, run, slug):
     data = json.loads(desk.files(run)["results.json"])
     data["conditions"][0]["slug"] = slug
@@ -70,3 +71,17 @@ def test_page_that_cannot_be_written(desk, run):
     assert (said.code, said.out) == (3, "")
     assert said.err.startswith("Error: run/index.html: cannot be written (")
     assert not list((desk.folder / run).glob(".*"))
+
+
+def test_a_linked_folder_of_pages_is_not_written_to(desk, run):
+    shutil.rmtree(desk.folder / run / "conditions")
+    precious = desk.folder / "precious"
+    precious.mkdir()
+    (desk.folder / run / "conditions").symlink_to(precious)
+    said = desk.glidefit("report", run)
+    assert (said.code, said.out) == (3, "")
+    assert said.err == (
+        "Error: run/conditions: this is a link to another folder, which is not written to. Delete "
+        "the link.\n"
+    )
+    assert list(precious.iterdir()) == []

@@ -127,6 +127,8 @@ def _fit_group(
         used[judged] = ~_strange(every, start)
         if np.array_equal(used, before):
             break
+        if not used.any():
+            return _failed(len(counts), len(names), "its tracks are too few and too unlike to fit")
         data = _data(members, used)
         fit = fit_likelihood(data, free=names, start=start)
         if fit.problem:
