@@ -29,13 +29,16 @@ def command(folder: Path, names: str | None, out: Path | None) -> None:
     Calibration is filled in where the files tell it, days and conditions where the names do. An
     existing file is never overwritten.
     """
-    from glidefit.pipeline.draft import draft
+    from glidefit.pipeline.draft import draft, lacking
 
     path, rows = draft(folder, names=names, out=out)
     empty = sorted(
         {name for row in rows for name in ("condition", "day", "chamber") if not row[name]}
     )
-    rest = f" Fill in {', '.join(empty)}." if empty else ""
+    wanted = [", ".join(empty)] if empty else []
+    if of_videos := lacking(rows):
+        wanted.append(f"{', '.join(of_videos)} of the videos")
+    rest = f" Fill in {'; '.join(wanted)}." if wanted else ""
     recordings = counted(len(rows), "recording")
     check = f"glidefit check {shlex.quote(str(path))}"
     click.echo(f"{path}: {recordings}.{rest} Then run `{check}`.")

@@ -139,7 +139,7 @@ def _from_table(task: Task) -> Tracked:
         pixel_um=recording.pixel_um,
         where=recording.name,
     )
-    tracks = _frame_range(table.tracks, recording)
+    tracks = _frame_range(table.tracks, recording, offset=table.first_frame)
     exposure, source = _exposure(recording, None, table.frame_s)
     width, height = _field(tracks, task)
     return Tracked(
@@ -189,17 +189,19 @@ def _field(tracks: Tracks, task: Task) -> tuple[float, float]:
     return width, height
 
 
-def _frame_range(tracks: Tracks, recording: Recording) -> Tracks:
-    """Only the frames that the sheet wants."""
-    first = recording.first_frame or 0
-    last = tracks.frame.max() if recording.last_frame is None else recording.last_frame
-    if first <= 0 and last >= tracks.frame.max():
+def _frame_range(tracks: Tracks, recording: Recording, *, offset: int) -> Tracks:
+    """Only the frames that the sheet wants, in the table's own numbers, which begin at offset."""
+    end = int(tracks.frame.max())
+    first = max((recording.first_frame or 0) - offset, 0)
+    last = end if recording.last_frame is None else recording.last_frame - offset
+    if first == 0 and last >= end:
         return tracks
     inside = (tracks.frame >= first) & (tracks.frame <= last)
     if not inside.any():
         raise InputError(
             f"{recording.where}, {recording.name}",
-            f"frames {first} to {last} hold no position; the table ends at {tracks.frame.max()}",
+            f"frames {recording.first_frame or 0} to {last + offset} hold no position; "
+            f"the table has frames {offset} to {end + offset}",
             expected="a range of frames with positions",
             remedy="Correct first_frame and last_frame.",
         )

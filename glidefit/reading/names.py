@@ -11,12 +11,13 @@ from pathlib import Path
 
 from glidefit.errors import InputError
 from glidefit.reading.sheet_columns import KNOWN, NEEDED, TABLE_SUFFIXES, has_unit
+from glidefit.reading.sheet_labels import plain_day, plain_label
 from glidefit.reading.table_cells import near_names
 from glidefit.reading.video import VIDEO_SUFFIXES
 
 _FIRST_COLUMNS = (*NEEDED, "shape", "pixel_um", "frame_s", "exposure_s", "control")
 _RECORDINGS = "a folder with videos or track tables"
-_DATE = r"\d{4}-\d{2}-\d{2}|\d{8}"
+_DATE = r"\d{4}-\d{2}-\d{2}|\d{8}|\d{1,2}\.\d{1,2}\.\d{4}"
 
 
 def draft_sheet(
@@ -28,7 +29,7 @@ def draft_sheet(
     """Rows of an assay sheet for all videos and track tables below a folder.
 
     Hidden files, reports of earlier runs and assay sheets are passed over. What nobody knows
-    stays empty, to be filled in.
+    stays empty, to be filled in. Days named as 20260303 or 3.3.2026 become ISO dates.
 
     Parameters
     ----------
@@ -40,7 +41,7 @@ def draft_sheet(
         text without "/", ``*`` for any text. Where a name can be read in two ways, the condition
         takes as much of it as it can, every other column as little.
     facts : callable, optional
-        What a video says of itself: columns such as pixel_um and their texts.
+        What a file says of itself: columns such as pixel_um and their texts.
 
     Returns
     -------
@@ -73,7 +74,7 @@ def draft_sheet(
         raise _no_match(pattern, [_stem(path.relative_to(folder)) for path in paths])
     rows = []
     for path, told in zip(paths, named, strict=True):
-        known = facts(path) if facts and path.suffix.lower() in VIDEO_SUFFIXES else {}
+        known = facts(path) if facts else {}
         rows.append({"recording": path.relative_to(folder).as_posix()} | known | told)
     columns = dict.fromkeys([*_FIRST_COLUMNS, *(pattern.columns if pattern else ())])
     columns |= dict.fromkeys(name for row in rows for name in row)
@@ -95,6 +96,8 @@ def _recordings(folder: Path) -> Iterator[Path]:
             circular = entry.is_symlink() and folder.resolve().is_relative_to(entry.resolve())
             if not circular and not (entry / "results.json").exists():
                 yield from _recordings(entry)
+        elif entry.exists() and not entry.is_file():
+            continue  # a pipe or a device, which would be waited for
         elif suffix in VIDEO_SUFFIXES or (suffix in TABLE_SUFFIXES and not _is_sheet(entry)):
             yield entry
 
@@ -103,9 +106,12 @@ def _is_sheet(path: Path) -> bool:
     """True for a CSV file whose first line has the columns of an assay sheet."""
     if path.suffix.lower() != ".csv":
         return False
-    with path.open("rb") as file:
-        # What is wrong with the file, if anything, is said when it is read as a recording.
-        header = file.readline(100_000).decode("utf-8-sig", errors="replace")
+    # What is wrong with the file, if anything, is said when it is read as a recording.
+    try:
+        with path.open("rb") as file:
+            header = file.readline(100_000).decode("utf-8-sig", errors="replace")
+    except OSError:
+        return False
     names = {name.strip(' "\r\n').casefold() for name in re.split("[,;]", header)}
     return {"recording", "condition"} <= names
 
@@ -138,7 +144,8 @@ class _Pattern:
         found = self.expression.fullmatch(stem)
         if found is None:
             return {}
-        return {name: found[f"c{i}"].strip() for i, name in enumerate(self.columns)}
+        texts = {name: found[f"c{i}"] for i, name in enumerate(self.columns)}
+        return {n: plain_day(t) if n == "day" else plain_label(t) for n, t in texts.items()}
 
 
 def _pattern(names: str) -> _Pattern:

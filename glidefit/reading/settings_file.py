@@ -16,8 +16,14 @@ _NAME = re.compile(r"[A-Za-z0-9_.\- \"']+")
 _EXAMPLE = 'For example max_speed = 8.0 under [link], or track = "particle" under [columns].'
 
 
-def read_settings(path: Path) -> dict[str, Any]:
+def read_settings(path: Path, *, expected: str = _SETTINGS) -> dict[str, Any]:
     """Sections of a settings file, not yet checked against the known settings.
+
+    Parameters
+    ----------
+    path : Path
+    expected : str
+        What the file should be, for messages.
 
     Raises
     ------
@@ -25,7 +31,7 @@ def read_settings(path: Path) -> dict[str, Any]:
         For a file that is missing, not UTF-8 or not TOML, with line and column.
     """
     called = path.name
-    data = file_bytes(path, called=called, expected=_SETTINGS, may_be_empty=True)
+    data = file_bytes(path, called=called, expected=expected, may_be_empty=True)
     text = utf8_text(data, called=called, remedy="Save it as UTF-8 in a text editor.")
     try:
         return tomllib.loads(text)

@@ -24,6 +24,7 @@ from glidefit.reading.sheet_columns import (
     number_cell,
     recording_cell,
 )
+from glidefit.reading.sheet_labels import label_notes, plain_day, plain_label
 from glidefit.reading.table_cells import (
     Cells,
     formula_errors,
@@ -33,6 +34,7 @@ from glidefit.reading.table_cells import (
     number,
     read_csv,
     read_workbook,
+    visible,
 )
 from glidefit.reading.video import VIDEO_SUFFIXES
 
@@ -45,7 +47,7 @@ class _Row:
 
     number: int
     where: str
-    text: dict[str, str]  # every named column, without surrounding blanks
+    text: dict[str, str]  # every named column, its blanks made plain
     broken: set[str]  # columns whose cell was already found to be wrong
     values: dict[str, Any]  # numbers and choices
     path: Path | None = None
@@ -57,7 +59,8 @@ def read_sheet(path: Path) -> Assay:
     The columns are those of README.md; a column of another name whose filled cells are all
     numbers, and whose name ends in a unit (``atp_uM``), goes into ``Recording.numbers``, any
     other into ``Recording.labels``. Where ``minutes`` is open and ``start_time`` is not, minutes
-    count from the earliest start in that chamber.
+    count from the earliest start in that chamber. Days written as 20260303 or 3.3.2026 become
+    ISO dates.
 
     Raises
     ------
@@ -88,8 +91,8 @@ def read_sheet(path: Path) -> Assay:
 
 
 def sheet_notes(assay: Assay) -> tuple[str, ...]:
-    """What looks odd in a sheet that can be used: pixel sizes no microscope has."""
-    notes = []
+    """What looks odd in a sheet that can be used: labels, and pixel sizes no microscope has."""
+    notes = label_notes(assay)
     for recording in assay.recordings:
         pixel = recording.pixel_um
         if pixel is not None and not 0.001 <= pixel <= 10:
@@ -136,10 +139,18 @@ def _rows(cells: Cells, columns: Mapping[str, int], errors: list[InputError]) ->
         if any(text.strip() for text in row[len(cells.header) :]):
             errors.append(_too_long(row, cells, where))
             continue
-        text = {name: row[i].strip() if i < len(row) else "" for name, i in columns.items()}
+        text = {name: _plain(name, row[i]) if i < len(row) else "" for name, i in columns.items()}
         broken = {name for name, content in text.items() if holds_formula(content)}
         text.update(dict.fromkeys(broken, ""))
         yield _Row(number=row_number, where=where, text=text, broken=broken, values={})
+
+
+def _plain(name: str, cell: str) -> str:
+    """What a cell says, whatever its blanks; blanks inside a path belong to it."""
+    text = visible(cell)
+    if name == "recording" or holds_formula(text):
+        return text
+    return plain_day(text) if name == "day" else plain_label(text)
 
 
 def _too_long(row: Sequence[str], cells: Cells, where: str) -> InputError:

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from glidefit.errors import InputError
-from glidefit.reading.table_cells import Cells, near_names, not_a_number, number
+from glidefit.reading.table_cells import Cells, near_names, not_a_number, number, visible
 from glidefit.reading.video import VIDEO_SUFFIXES
 
 TABLE_SUFFIXES = (".csv", ".parquet", ".pq")
@@ -63,6 +63,7 @@ NUMBERS: Mapping[str, NumberColumn] = {
     "channel": NumberColumn(expected="a channel as a whole number from 0", allowed=_whole),
     "position": NumberColumn(expected="a position as a whole number from 0", allowed=_whole),
 }
+_SHORTEST_S, _LONGEST_S = 1e-6, 1e5  # frame intervals beyond a camera and beyond a day
 WHOLE = ("first_frame", "last_frame", "channel", "position")
 
 CHOICES: Mapping[str, tuple[str, ...]] = {
@@ -187,7 +188,7 @@ def number_cell(name: str, text: str, where: str) -> float | None:
         For text, a decimal comma or a number out of limits.
     """
     column = NUMBERS[name]
-    if not text:
+    if not visible(text):
         return None
     value = number(text)
     if value is None:
@@ -195,6 +196,13 @@ def number_cell(name: str, text: str, where: str) -> float | None:
     if not column.allowed(value):
         remedy = "Correct it, or leave the cell empty if it is not known."
         raise InputError(where, f"holds {text}", expected=column.expected, remedy=remedy)
+    if name == "frame_s" and not _SHORTEST_S <= value <= _LONGEST_S:
+        raise InputError(
+            where,
+            f"holds {text}, which no film has",
+            expected=f"the frame interval in seconds, {_SHORTEST_S:g} to {_LONGEST_S:g}",
+            remedy="Check the unit, or leave the cell empty if it is not known.",
+        )
     return value
 
 
@@ -224,7 +232,7 @@ def recording_cell(text: str, where: str, folder: Path) -> Path:
     Raises
     ------
     InputError
-        For a file that does not exist (with near names), a folder or an unknown type.
+        For a file that does not exist (with near names), a folder, a pipe or an unknown type.
     """
     path = folder / text
     if not os.path.lexists(path) and "\\" in text:
@@ -236,6 +244,8 @@ def recording_cell(text: str, where: str, folder: Path) -> Path:
         found, remedy = f"there is no file {text!r}", near_names(path)
     elif os.path.isdir(path):
         found = f"{text!r} is a folder"
+    elif not os.path.isfile(path):
+        found, remedy = f"{text!r} is a pipe or a device", "Save it as a file first."
     elif suffix not in VIDEO_SUFFIXES and suffix not in TABLE_SUFFIXES:
         found, remedy = f"{text!r} is of an unknown type", "Save it as one of these."
     else:

@@ -21,6 +21,9 @@ from glidefit.errors import InputError
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)(e[+-]?\d+)?", re.ASCII | re.IGNORECASE)
 _DECIMAL_COMMA = re.compile(r"[+-]?\d*,\d+", re.ASCII)
 _FAILED = {"#DIV/0!", "#N/A", "#NAME?", "#NULL!", "#NUM!", "#REF!", "#VALUE!"}
+# All that str.strip takes away, and zero-width characters that copying from a page brings along.
+_UNSEEN = "".join(filter(str.isspace, map(chr, range(0x3001)))) + "\u200b\u200c\u200d\u2060\ufeff"
+_HEAD = 100_000  # bytes in which a header must end
 _LETTERS = "ABCDEFGHIJKLMNOPQRSTUVWXYZ"
 
 
@@ -44,9 +47,15 @@ class Cells:
         return f"{self.file}, row {row_number}, column {name}"
 
 
+def visible(text: str) -> str:
+    """Text without blanks and characters of no width around it."""
+    return text.strip(_UNSEEN)
+
+
 def number(text: str) -> float | None:
     """The finite number a cell holds, written with a decimal point; None if it holds none."""
-    if not _NUMBER.fullmatch(text.strip()):
+    text = visible(text)
+    if not _NUMBER.fullmatch(text):
         return None
     value = float(text)
     return value if math.isfinite(value) else None
@@ -54,7 +63,7 @@ def number(text: str) -> float | None:
 
 def not_a_number(text: str, where: str, *, expected: str) -> InputError:
     """The error of a cell that should hold a number and does not."""
-    text = text.strip()
+    text = visible(text)
     if _DECIMAL_COMMA.fullmatch(text):
         point = text.replace(",", ".")
         return InputError(
@@ -73,16 +82,19 @@ def not_a_number(text: str, where: str, *, expected: str) -> InputError:
 
 def has_decimal_comma(text: str) -> bool:
     """True for a number written with a decimal comma, as 0,5."""
-    return bool(_DECIMAL_COMMA.fullmatch(text.strip()))
+    return bool(_DECIMAL_COMMA.fullmatch(visible(text)))
 
 
-def file_bytes(path: Path, *, called: str, expected: str, may_be_empty: bool = False) -> bytes:
-    """What a file holds.
+def file_bytes(
+    path: Path, *, called: str, expected: str, may_be_empty: bool = False, most: int | None = None
+) -> bytes:
+    """What a file holds, or its first ``most`` bytes.
 
     Raises
     ------
     InputError
-        If it is missing (with near names), a folder, unreadable, or empty and may not be so.
+        If it is missing (with near names), a folder, a pipe or a device, unreadable, or empty
+        and may not be so.
     """
     if os.path.isdir(path):
         remedy = "Give the path of the file itself."
@@ -90,8 +102,11 @@ def file_bytes(path: Path, *, called: str, expected: str, may_be_empty: bool = F
     if not os.path.exists(path):
         found = f"there is no such file in {path.parent.resolve()}"
         raise InputError(called, found, expected=expected, remedy=near_names(path))
+    if not os.path.isfile(path):  # reading a pipe would wait for somebody to write into it
+        found, remedy = "is a pipe or a device, not a file on disk", "Save it as a file first."
+        raise InputError(called, found, expected=expected, remedy=remedy)
     try:
-        data = path.read_bytes()
+        data = path.read_bytes() if most is None else _first_bytes(path, most)
     except OSError as error:
         found = f"the file cannot be read ({error.strerror})"
         raise InputError(called, found, expected=expected, remedy="Check its rights.") from error
@@ -101,8 +116,15 @@ def file_bytes(path: Path, *, called: str, expected: str, may_be_empty: bool = F
     return data
 
 
+def _first_bytes(path: Path, most: int) -> bytes:
+    with path.open("rb") as file:
+        return file.read(most)
+
+
 def near_names(path: Path) -> str:
     """A sentence with the names in the folder of a missing file that are like its own."""
+    if os.path.islink(path):
+        return "It is a link that leads to no file; correct the link."
     if not os.path.isdir(path.parent):
         return f"There is no folder {path.parent} either; check the path."
     names = {p.name.casefold(): p.name for p in sorted(path.parent.iterdir())}
@@ -161,6 +183,28 @@ def read_csv(path: Path, *, called: str, expected: str, known: Collection[str]) 
         raise InputError(called, "the file is empty", expected=expected, remedy=remedy)
     delimiter = _delimiter(text, called=called, known=known)
     return _cells(_records(text, called=called, delimiter=delimiter), called, delimiter)
+
+
+def csv_header(
+    path: Path, *, called: str, expected: str, known: Collection[str]
+) -> tuple[str, ...]:
+    """Names in the first filled line of a CSV file, without reading all of it.
+
+    Raises
+    ------
+    InputError
+        As `read_csv`, as far as the first lines show it.
+    """
+    data = file_bytes(path, called=called, expected=expected, most=_HEAD)
+    whole = data[: data.rfind(b"\n") + 1] if len(data) == _HEAD else data
+    remedy = "In the spreadsheet program, save it as 'CSV UTF-8'."
+    text = utf8_text(whole or data, called=called, remedy=remedy)
+    if not text.strip():
+        remedy = "Check that it was saved whole."
+        raise InputError(called, "the file is empty", expected=expected, remedy=remedy)
+    delimiter = _delimiter(text, called=called, known=known)
+    reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter)
+    return tuple(name.strip() for name in next(filter(_is_filled, reader)))
 
 
 def _delimiter(text: str, *, called: str, known: Collection[str]) -> str:

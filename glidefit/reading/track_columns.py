@@ -11,7 +11,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.errors import InputError
-from glidefit.reading.table_cells import file_bytes, not_a_number, number, read_csv
+from glidefit.reading.table_cells import (
+    csv_header,
+    file_bytes,
+    not_a_number,
+    number,
+    read_csv,
+    visible,
+)
 from glidefit.settings import ColumnSettings
 
 Floats = NDArray[np.float64]
@@ -52,7 +59,7 @@ def read_columns(path: Path, *, columns: ColumnSettings, called: str) -> Columns
         )
     else:
         header, rows, values = _csv_columns(path, called, set(names.values()))
-    written = {name: column for name, column in names.items() if column in values}
+    written = _written(names, header, called)
     for column in written.values():
         if header.count(column) > 1:
             found = f"{header.count(column)} columns are called {column!r}"
@@ -69,6 +76,37 @@ def read_columns(path: Path, *, columns: ColumnSettings, called: str) -> Columns
         row_numbers=rows,
         values={name: values[column] for name, column in written.items()},
     )
+
+
+def require_columns(path: Path, *, columns: ColumnSettings, called: str) -> None:
+    """Look at the header of a table only.
+
+    Raises
+    ------
+    InputError
+        For an unreadable file, or one without the columns that ``columns`` names.
+    """
+    names = columns.model_dump()
+    if path.suffix.lower() in (".parquet", ".pq"):
+        header, _, _ = _parquet_columns(path, called, set(), text=columns.track)
+    else:
+        header = csv_header(path, called=called, expected=_TABLE, known=set(names.values()))
+    _require(_written(names, header, called), header, columns=columns, called=called)
+
+
+def _written(names: Mapping[str, str], header: Sequence[str], called: str) -> dict[str, str]:
+    """What the file calls each of our columns that it has; none may stand for two of them."""
+    written = {name: column for name, column in names.items() if column in header}
+    first: dict[str, str] = {}
+    for name, column in written.items():
+        if first.setdefault(column, name) != name:
+            raise InputError(
+                called,
+                f"the column {column!r} is named for both {first[column]} and {name}",
+                expected="a column of its own for each of them",
+                remedy="Correct [columns] in the settings file.",
+            )
+    return written
 
 
 _Read = tuple[Sequence[str], NDArray[np.int64], dict[str, Sequence[str] | Floats]]
@@ -185,7 +223,7 @@ def labels(columns: Columns) -> Sequence[str]:
     InputError
         For an empty label.
     """
-    texts = list(map(str.strip, map(str, columns.values["track"])))
+    texts = list(map(visible, map(str, columns.values["track"])))
     if not all(texts):
         empty = [i for i, text in enumerate(texts) if not text]
         raise InputError(
@@ -212,7 +250,7 @@ def numbers(columns: Columns, name: str, *, expected: str, may_be_empty: bool = 
         rows = np.flatnonzero(bad)
     else:
         parsed, rows = _parsed(values, may_be_empty=may_be_empty)
-        texts, values = [values[int(i)].strip() for i in rows], parsed
+        texts, values = [visible(values[int(i)]) for i in rows], parsed
     if not len(rows):
         return values
     where = columns.where(name, int(rows[0]))
@@ -239,7 +277,7 @@ def _parsed(texts: Sequence[str], *, may_be_empty: bool) -> tuple[Floats, NDArra
     bad = [
         i
         for i, (value, text) in enumerate(zip(found, texts, strict=True))
-        if value is None and text.strip().casefold() not in allowed
+        if value is None and visible(text).casefold() not in allowed
     ]
     filled = [np.nan if value is None else value for value in found]
     return np.array(filled, dtype=np.float64), np.array(bad, dtype=np.int64)

@@ -18,6 +18,9 @@ from glidefit.tracks import Tracks
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
+_FARTHEST_UM = 1e6  # a stage moves by centimetres; beyond a metre the unit is wrong
+_LONGEST = 1_000_000  # frames, unless rows are so many that the range is no mistake
+_FRAMES_PER_ROW = 1000
 _AGREEMENT = 0.01  # relative, between the sheet's frame_s and the table's times
 _EXPECTED = {
     "x_um": "a position in µm",
@@ -38,7 +41,8 @@ class TrackTable:
     frame_s: float
     frame_s_source: str  # "sheet" or "file"
     pixel_um: float  # NaN for a table in µm
-    n_frames: int  # last frame + 1
+    first_frame: int  # number in the table of the frame that is 0 in the tracks
+    n_frames: int  # from the first frame with a position to the last
     notes: tuple[str, ...]  # what is odd, in words for the user
 
 
@@ -50,7 +54,7 @@ def read_track_table(
     pixel_um: float | None,
     where: str | None = None,
 ) -> TrackTable:
-    """The tracks of one table.
+    """The tracks of one table, their frames counted from the first one with a position.
 
     Parameters
     ----------
@@ -76,15 +80,20 @@ def read_track_table(
     scale, notes = _scale(table, pixel_um)
     unit, factor = ("um", 1.0) if math.isnan(scale) else ("px", scale)
     values, texts = _values(table, unit)
+    for name in (f"x_{unit}", f"y_{unit}"):
+        _reject_far(table, name, values[name] * factor)
     rows = _sorted(values, texts)
+    _reject_wide_range(table, rows)
     _reject_repeats(table, rows)
     _reject_backward_times(table, rows)
     interval, source = _interval(table, rows, frame_s)
-    counted = np.asarray(rows.frame * interval, dtype=np.float64)
+    first = int(rows.frame.min())
+    frame = rows.frame - first
+    counted = np.asarray(frame * interval, dtype=np.float64)
     tracks = Tracks(
         label=np.array(rows.labels, dtype=np.str_),
         offsets=np.concatenate([[0], np.cumsum(np.bincount(rows.index))]).astype(np.int64),
-        frame=rows.frame,
+        frame=frame,
         time_s=counted if rows.time is None else rows.time,
         x_um=values[f"x_{unit}"][rows.order] * factor,
         y_um=values[f"y_{unit}"][rows.order] * factor,
@@ -96,7 +105,8 @@ def read_track_table(
         frame_s=interval,
         frame_s_source=source,
         pixel_um=scale,
-        n_frames=int(rows.frame.max()) + 1,
+        first_frame=first,
+        n_frames=int(frame.max()) + 1,
         notes=tuple(notes + _order_notes(rows)),
     )
 
@@ -175,7 +185,7 @@ class _Sorted:
     order: Ints  # (n,) row of the table
     index: Ints  # (n,) of the track
     labels: tuple[str, ...]
-    frame: Ints  # (n,)
+    frame: Ints  # (n,) as the table has it
     time: Floats | None  # (n,)
     inside: NDArray[np.bool_]  # (n - 1,) the next row is of the same track
 
@@ -202,9 +212,37 @@ def _order_notes(rows: _Sorted) -> list[str]:
     notes = []
     if np.any(np.diff(rows.order)[rows.inside] < 0):
         notes.append("rows were not in order of frames within a track and were sorted")
-    if rows.frame.min() == 1:
-        notes.append("frames begin at 1, not at 0; they were kept so")
     return notes
+
+
+def _reject_far(table: Columns, name: str, position_um: Floats) -> None:
+    far = np.abs(position_um) > _FARTHEST_UM
+    if not np.any(far):
+        return
+    row = int(np.argmax(far))
+    pixels = name.endswith("_px")
+    raise InputError(
+        table.where(name, row),
+        f"holds a position of {position_um[row]:.6g} µm, which no stage reaches",
+        expected=f"a position within ±{_FARTHEST_UM:.0f} µm",
+        remedy="Correct it, or pixel_um in the assay sheet."
+        if pixels
+        else "Correct it, or the unit of the column; positions are in µm.",
+    )
+
+
+def _reject_wide_range(table: Columns, rows: _Sorted) -> None:
+    span = int(rows.frame.max()) - int(rows.frame.min()) + 1
+    if span <= max(_LONGEST, _FRAMES_PER_ROW * len(rows.frame)):
+        return
+    k = int(np.argmax(rows.frame))
+    raise InputError(
+        table.where("frame", int(rows.order[k])),
+        f"frame {rows.frame[k]} is {span - 1} frames after the first one, "
+        f"in a table of {len(rows.frame)} rows",
+        expected="frame numbers that count images",
+        remedy="Correct it; a time belongs in the column time_s.",
+    )
 
 
 def _reject_repeats(table: Columns, rows: _Sorted) -> None:

@@ -127,8 +127,8 @@ def test_frames_that_are_not_in_the_table(desk):
     said = desk.glidefit("run", "assay.csv")
     assert said.code == 3
     assert said.err == (
-        "Error: assay.csv, row 2, a.csv: frames 50 to 60 hold no position; the table ends at 19; "
-        "expected a range of frames with positions. Correct first_frame and last_frame.\n"
+        "Error: assay.csv, row 2, a.csv: frames 50 to 60 hold no position; the table has frames "
+        "0 to 19; expected a range of frames with positions. Correct first_frame and last_frame.\n"
     )
 
 

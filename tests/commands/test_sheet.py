@@ -30,7 +30,8 @@ def test_draft_from_names_and_files(desk, folder):
     said = desk.glidefit("sheet", folder, "--names", PATTERN)
     assert (said.code, said.err) == (0, "")
     assert said.out == (
-        "films/assay.csv: 3 recordings. Then run `glidefit check films/assay.csv`.\n"
+        "films/assay.csv: 3 recordings. Fill in shape of the videos. Then run `glidefit check "
+        "films/assay.csv`.\n"
     )
     drafted = rows(desk)
     told = [tuple(row[k] for k in ("day", "condition", "chamber", "field")) for row in drafted]
@@ -47,8 +48,8 @@ def test_draft_from_names_and_files(desk, folder):
 def test_draft_without_names_says_what_to_fill_in(desk, folder):
     said = desk.glidefit("sheet", folder)
     assert said.out == (
-        "films/assay.csv: 3 recordings. Fill in chamber, condition, day. Then run `glidefit check "
-        "films/assay.csv`.\n"
+        "films/assay.csv: 3 recordings. Fill in chamber, condition, day; shape of the videos. "
+        "Then run `glidefit check films/assay.csv`.\n"
     )
 
 
@@ -82,6 +83,34 @@ def test_existing_file_is_not_overwritten(desk, folder, out):
         "another --out.\n"
     )
     assert (desk.folder / "films/assay.csv").read_text() == "of somebody"
+
+
+@pytest.mark.parametrize("out", ["a.xlsx", "assay"])
+def test_sheet_is_written_as_csv_only(desk, folder, out):
+    said = desk.glidefit("sheet", folder, "--out", out)
+    assert (said.code, said.out) == (3, "")
+    assert said.err == (
+        f"Error: {out}: the sheet is written as CSV. Give --out a name that ends in .csv; a "
+        "spreadsheet program opens it and can save it as XLSX.\n"
+    )
+    assert not (desk.folder / out).exists()
+
+
+def test_tables_need_nothing_of_the_videos(desk):
+    desk.table("films/a.csv")
+    said = desk.glidefit("sheet", "films", "--names", "{field}")
+    assert "Fill in chamber, condition, day. Then" in said.out
+
+
+def test_video_without_calibration_and_table_without_columns(desk):
+    desk.write("films/notes.csv", "a,b\n1,2\n")
+    tifffile.imwrite(desk.folder / "films/bare.tif", np.zeros((5, 32, 32), "u2"))
+    said = desk.glidefit("sheet", "films")
+    assert "day; shape, pixel_um, frame_s of the videos. Then" in said.out
+    [_, table] = rows(desk)
+    assert table["remark"].startswith(
+        "the columns 'track', 'frame', 'x_um' and 'y_um' are missing. Its columns are 'a', 'b'."
+    )
 
 
 def test_place_that_cannot_be_written(desk, folder):

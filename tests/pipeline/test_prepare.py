@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -11,8 +12,9 @@ from numpy.testing import assert_allclose
 
 from glidefit.assay import Recording
 from glidefit.errors import InputError
-from glidefit.pipeline.prepare import Task, detect, open_video, prepare, track
+from glidefit.pipeline.prepare import Task, _frame_range, detect, open_video, prepare, track
 from glidefit.settings import FitSettings, Settings
+from glidefit.tracks import Tracks
 from glidefit.writing.recordings import write_video
 
 PIXEL_UM, FRAME_S, EXPOSURE_S = 0.16, 0.5, 0.1
@@ -183,3 +185,29 @@ def test_video_becomes_a_track(video):
 def test_fewer_than_three_frames_are_no_video(video, first, last):
     with pytest.raises(InputError, match="at least three frames inside the video"):
         open_video(task(video, shape="spot", first_frame=first, last_frame=last).recording)
+
+
+@pytest.mark.parametrize(
+    ("start", "first", "last", "kept"),
+    [(0, 5, 14, 10), (7, 12, 21, 10), (7, None, 10, 4), (7, 3, 8, 2), (7, None, None, 20)],
+)
+def test_frames_of_the_sheet_are_those_of_the_table(start, first, last, kept):
+    frame = np.arange(20)
+    tracks = Tracks(
+        label=np.array(["1"]),
+        offsets=np.array([0, 20]),
+        frame=frame,
+        time_s=frame * 0.5,
+        x_um=frame * 0.4,
+        y_um=frame * 0.0,
+    )
+    recording = Recording(
+        name="r",
+        path=Path("r.csv"),
+        condition="c",
+        day="d",
+        chamber="1",
+        first_frame=first,
+        last_frame=last,
+    )
+    assert len(_frame_range(tracks, recording, offset=start).frame) == kept

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import pytest
 
-from glidefit.errors import InputErrors
+from glidefit.errors import InputError, InputErrors
 from glidefit.kernels.synthetic_frames import CameraFaults
 from glidefit.pipeline.recipe import Part, Video, read_recipe
 from glidefit.steps.simulate import Scenario, ScenarioCondition, Spread
@@ -32,6 +32,11 @@ speed_um_s = 1
 rotational_diffusion_rad2_s = 0.01
 motile_fraction = 0.5
 """
+
+
+def test_recipe_that_is_not_there(tmp_path):
+    with pytest.raises(InputError, match=r"nothere: there is no such file .* a recipe in TOML"):
+        read_recipe(tmp_path / "nothere")
 
 
 def test_every_kind_of_value(tmp_path):

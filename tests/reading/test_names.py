@@ -72,6 +72,15 @@ def test_files_that_are_no_recordings_are_passed_over(tmp_path):
     assert [row["recording"] for row in rows] == ["a.tif", "empty.csv"]
 
 
+def test_pipes_are_not_waited_for_and_a_link_to_itself_is_listed(tmp_path):
+    touch(tmp_path, "a.csv")
+    os.mkfifo(tmp_path / "pipe.csv")
+    os.mkfifo(tmp_path / "pipe.tif")
+    os.symlink(tmp_path / "round.csv", tmp_path / "round.csv")
+    rows = draft_sheet(tmp_path, names=None)
+    assert [row["recording"] for row in rows] == ["a.csv", "round.csv"]
+
+
 def test_a_link_back_up_does_not_go_round_in_circles(tmp_path):
     touch(tmp_path, "day1/a.tif")
     os.symlink(tmp_path, tmp_path / "day1/up")
@@ -101,6 +110,9 @@ def test_a_link_back_up_does_not_go_round_in_circles(tmp_path):
             "{day}-{condition}-{chamber}",
             {"day": "2024-05-31", "condition": "kin", "chamber": "2"},
         ),
+        ("20240531_kin.csv", "{day}_{condition}", {"day": "2024-05-31", "condition": "kin"}),
+        ("31.5.2024.kin.csv", "{day}.{condition}", {"day": "2024-05-31", "condition": "kin"}),
+        ("99999999_kin  a.csv", "{day}_{condition}", {"day": "99999999", "condition": "kin a"}),
         ("Monday-kin.csv", "{day}-{condition}", {"day": "Monday", "condition": "kin"}),
         ("x/y/kin.csv", "*/{condition}", {"condition": "kin"}),
         ("kin (1) 50 uM.csv", "{condition} (1) {atp_uM} uM", {"condition": "kin", "atp_uM": "50"}),
@@ -125,16 +137,18 @@ def test_a_file_that_does_not_fit_stays_empty(tmp_path):
     ]
 
 
-def test_facts_are_asked_of_videos_only_and_names_come_before_them(tmp_path):
+def test_facts_are_asked_of_every_file_and_names_come_before_them(tmp_path):
     touch(tmp_path, "0.5/a.tif", "0.5/b.csv")
     asked = []
 
     def facts(path):
         asked.append(path)
+        if path.suffix == ".csv":
+            return {}
         return {"pixel_um": "0.107", "frame_s": "1", "remark": "frame times vary"}
 
     rows = draft_sheet(tmp_path, names="{frame_s}/{field}", facts=facts)
-    assert asked == [tmp_path / "0.5/a.tif"]
+    assert asked == [tmp_path / "0.5/a.tif", tmp_path / "0.5/b.csv"]
     assert list(rows[0]) == [*COLUMNS, "field", "remark"]
     wanted = ("frame_s", "field", "pixel_um", "remark")
     assert [tuple(row[column] for column in wanted) for row in rows] == [
@@ -214,7 +228,7 @@ def test_a_folder_that_may_not_be_read(tmp_path, monkeypatch):
 
 
 PARTS = st.text(st.sampled_from("ab1-+ ."), min_size=1, max_size=5).filter(
-    lambda text: text == text.strip(" .") and text
+    lambda text: text == text.strip(" .") and text and "  " not in text
 )
 
 

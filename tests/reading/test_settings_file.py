@@ -127,6 +127,11 @@ def test_a_file_that_is_not_there(tmp_path):
     )
 
 
+def test_messages_call_the_file_what_it_should_be(tmp_path):
+    with pytest.raises(InputError, match="expected a recipe in TOML"):
+        read_settings(tmp_path / "nothere.toml", expected="a recipe in TOML")
+
+
 LINES = st.text(st.sampled_from("[]=\"'.,#\\ a1_µ\n{}-:T"), max_size=30)
 
 

@@ -139,7 +139,7 @@ def test_row_numbers_are_those_of_a_spreadsheet(folder):
     text = f'{NEEDED},note\n\nt.csv,k,1,1,"two\nlines"\n\nu.parquet,k,1,1,\n'
     first, second = only(folder, text)
     assert (first.where, second.where) == ("assay.csv, row 3", "assay.csv, row 5")
-    assert first.labels == {"note": "two\nlines"}
+    assert first.labels == {"note": "two lines"}
 
 
 def test_a_delimiter_inside_quotes_is_text(folder):
@@ -267,7 +267,7 @@ def test_workbook_cells_become_plain_text(folder):
         labels={"fresh": "TRUE", "note": "0.1"},
         where="assay.xlsx, row 2",
     )
-    assert (second.condition, second.day, second.chamber) == ("5", "20240531", "3b")
+    assert (second.condition, second.day, second.chamber) == ("5", "2024-05-31", "3b")
     assert (second.start_time, second.where) == ("2024-05-31T14:05:00", "assay.xlsx, row 4")
 
 
@@ -301,6 +301,82 @@ def test_a_pixel_size_no_microscope_has_is_noted(folder):
         "assay.csv, row 2: a pixel of 107 µm is unusual; "
         "pixel_um is the width of one pixel in the sample, in µm",
     )
+
+
+# What a label may look like
+
+
+@pytest.mark.parametrize(
+    ("written", "day"),
+    [
+        ("20260303", "2026-03-03"),
+        ("3.3.2026", "2026-03-03"),
+        ("03.12.2026", "2026-12-03"),
+        ("2026-03-03", "2026-03-03"),
+        ("20261303", "20261303"),
+        ("30.2.2026", "30.2.2026"),
+        ("12345678", "12345678"),
+        ("3/4/2026", "3/4/2026"),
+        (" day\u00a0 2 ", "day 2"),
+    ],
+)
+def test_days_become_iso_dates_where_only_one_is_meant(folder, written, day):
+    [recording] = only(folder, f"{NEEDED}\nt.csv,k,{written},1\n")
+    assert recording.day == day
+
+
+def test_blanks_in_labels_are_made_plain_but_not_those_in_paths(folder):
+    (folder / "two  blanks.csv").touch()
+    text = f"{NEEDED},field,note\ntwo  blanks.csv,wild \u00a0type\u200b,1,\u202fa\tb,f  1,x  y\n"
+    [recording] = only(folder, text)
+    assert recording.path == folder / "two  blanks.csv"
+    assert (recording.condition, recording.chamber) == ("wild type", "a b")
+    assert (recording.field, recording.labels) == ("f 1", {"note": "x y"})
+
+
+def test_cells_of_no_width_are_empty(folder):
+    [recording] = only(folder, f"{NEEDED},pixel_um,atp_uM\nt.csv,k,1,1,\u200b,\u200b2\u200b\n")
+    assert (recording.pixel_um, recording.numbers) == (None, {"atp_uM": 2.0})
+    assert problems(write(folder, f"{NEEDED}\nt.csv,\u200b,1,1\n")) == [
+        "assay.csv, row 2, column 'condition': is empty; expected the name of the condition. "
+        "Fill it in; every recording needs it."
+    ]
+
+
+def notes(folder, *rows):
+    """Notes on a sheet with these conditions, days and chambers."""
+    for i in range(len(rows)):
+        (folder / f"t{i}.csv").touch()
+    lines = [f"t{i}.csv,{row}" for i, row in enumerate(rows)]
+    return sheet_notes(read_sheet(write(folder, "\n".join([NEEDED, *lines]))))
+
+
+def test_a_plain_sheet_has_no_notes(folder):
+    assert notes(folder, "WT,2026-03-03,1", "WT,4.3.2026,1", "mut,20260303,2") == ()
+
+
+@pytest.mark.parametrize(
+    ("rows", "note"),
+    [
+        (("WT,1,1", "wt,1,2"), "conditions 'WT' and 'wt' differ only by capitals or blanks; "
+         "if they are the same, write them alike"),
+        (("wild type,1,1", "wildtype,1,2"), "conditions 'wild type' and 'wildtype' differ only by "
+         "capitals or blanks; if they are the same, write them alike"),
+        (("k,Day 1,1", "k,day1,2"), "days 'Day 1' and 'day1' differ only by capitals or blanks; "
+         "if they are the same, write them alike"),
+        (("k,3.3.2026,1", "k,Monday,1"), "days are written in different styles, such as "
+         "'2026-03-03' and 'Monday'; a day written in two styles counts as two days"),
+        (("k,3/3/2026,1", "k,2026-03-03,1"), "days are written in different styles, such as "
+         "'3/3/2026' and '2026-03-03'; a day written in two styles counts as two days"),
+        (("a,1,A", "b,1,A", "a,2,A"), "chamber 'A' of day '1' holds the conditions 'a' and 'b': a "
+         "solution exchange? Then this is right; otherwise give each chamber its own label"),
+        (("a,1,A", "b,1,A", "c,1,A", "a,2,A", "b,2,A"), "chamber 'A' of day '1' holds the "
+         "conditions 'a', 'b' and 'c' (and 1 more such): a solution exchange? Then this is right; "
+         "otherwise give each chamber its own label"),
+    ],
+)  # fmt: skip
+def test_what_looks_odd_in_labels_is_noted(folder, rows, note):
+    assert notes(folder, *rows) == (note,)
 
 
 # What can be wrong with the file as a whole
@@ -378,6 +454,18 @@ def test_a_sheet_that_is_not_there(folder):
     ]
     assert problems(folder / "day1") == [
         f"day1: is a folder; {SHEET} Give the path of the file itself."
+    ]
+
+
+def test_a_pipe_is_not_waited_for(folder):
+    os.mkfifo(folder / "assay.csv")
+    os.mkfifo(folder / "video.tif")
+    assert problems(folder / "assay.csv") == [
+        f"assay.csv: is a pipe or a device, not a file on disk; {SHEET} Save it as a file first."
+    ]
+    assert problems(write(folder, f"{NEEDED},shape\nvideo.tif,k,1,1,spot\n", "b.csv")) == [
+        "b.csv, row 2, column 'recording': 'video.tif' is a pipe or a device; expected a video "
+        "(TIFF or ND2) or a track table (CSV or Parquet). Save it as a file first."
     ]
 
 
@@ -496,6 +584,9 @@ TIME = "expected HH:MM, HH:MM:SS or an ISO 8601 date and time. For example 14:05
         ("pixel_um", '"0,107"', "holds '0,107' with a decimal comma; expected the pixel size in "
          "µm, above 0, with a decimal point. Write 0.107."),
         ("frame_s", "0", f"holds 0; expected the frame interval in s, above 0. {CORRECT}"),
+        *(("frame_s", cell, f"holds {cell}, which no film has; expected the frame interval in "
+           "seconds, 1e-06 to 100000. Check the unit, or leave the cell empty if it is not known.")
+          for cell in ("9e-7", "100001")),
         ("exposure_s", "-1", f"holds -1; expected the exposure in s, 0 or more. {CORRECT}"),
         ("minutes", "-1", "holds -1; expected minutes after the start in the chamber, 0 or more. "
          f"{CORRECT}"),

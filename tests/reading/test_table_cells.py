@@ -13,6 +13,7 @@ from openpyxl.worksheet.formula import ArrayFormula, DataTableFormula
 from glidefit.errors import InputError
 from glidefit.reading.table_cells import (
     Cells,
+    csv_header,
     formula_errors,
     has_decimal_comma,
     number,
@@ -27,7 +28,9 @@ def test_every_finite_number_comes_back_from_its_text(value):
     assert number(f" {value:+.17g} ") == value
 
 
-@pytest.mark.parametrize("text", ["5", "+5.", " 5.0 ", "0.5e1", "50E-1", "\u00a05"])
+@pytest.mark.parametrize(
+    "text", ["5", "+5.", " 5.0 ", "\u200b5\ufeff", "0.5e1", "50E-1", "\u00a05"]
+)
 def test_forms_of_five(text):
     assert number(text) == 5
 
@@ -94,6 +97,27 @@ def test_the_delimiter_is_the_one_that_finds_known_names(tmp_path, header, delim
     path.write_text(f"{header}\n")
     found = read_csv(path, called="t.csv", expected="a table", known=["track", "frame"])
     assert found.delimiter == delimiter
+
+
+@pytest.mark.parametrize("target", ["gone.csv", "a.csv"])
+def test_a_link_that_leads_nowhere(tmp_path, target):
+    (tmp_path / "a.csv").symlink_to(tmp_path / target)
+    with pytest.raises(InputError) as caught:
+        read_csv(tmp_path / "a.csv", called="a.csv", expected="a table", known=["day"])
+    assert str(caught.value) == (
+        f"a.csv: there is no such file in {tmp_path}; expected a table. "
+        "It is a link that leads to no file; correct the link."
+    )
+
+
+def test_the_header_alone_is_read_of_a_long_file(tmp_path):
+    path = tmp_path / "a.csv"
+    path.write_bytes(b"\xef\xbb\xbf\n day ; b\n" + "µ;1\n".encode() * 30_000 + b"\xff")
+    read = csv_header(path, called="a.csv", expected="a table", known=["day"])
+    assert read == ("day", "b")
+    path.write_bytes(b" \n")
+    with pytest.raises(InputError, match="the file is empty; expected a table"):
+        csv_header(path, called="a.csv", expected="a table", known=["day"])
 
 
 def test_a_formula_that_fills_a_range_is_one(tmp_path):

@@ -3,6 +3,7 @@
 import builtins
 import io
 import math
+import os
 
 import numpy as np
 import pandas as pd
@@ -12,6 +13,7 @@ from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
 
 from glidefit.errors import InputError, InputErrors
+from glidefit.reading.track_columns import require_columns
 from glidefit.reading.track_table import read_track_table
 from glidefit.settings import ColumnSettings
 from glidefit.tracks import Tracks
@@ -165,18 +167,89 @@ def test_rows_out_of_order_are_sorted_with_a_note(tmp_path):
     assert table.notes == ("rows were not in order of frames within a track and were sorted",)
 
 
-def test_frames_from_one_are_kept_with_a_note(tmp_path):
-    table = read(write(tmp_path, f"{HEADER}\na,1,0,0\na,2,0,0\n"))
-    assert_array_equal(table.tracks.frame, [1, 2])
-    assert_array_equal(table.tracks.time_s, [0.5, 1.0])
-    assert table.n_frames == 3
-    assert table.notes == ("frames begin at 1, not at 0; they were kept so",)
+def test_frames_count_from_the_first_with_a_position(tmp_path):
+    table = read(write(tmp_path, f"{HEADER}\na,9,0,0\na,10,0,0\nb,7,0,0\n"))
+    assert_array_equal(table.tracks.frame, [2, 3, 0])
+    assert_array_equal(table.tracks.time_s, [1, 1.5, 0])
+    assert (table.first_frame, table.n_frames, table.notes) == (7, 4, ())
 
 
-def test_frames_may_begin_later_and_leave_gaps(tmp_path):
-    table = read(write(tmp_path, f"{HEADER}\na,7,0,0\na,9,0,0\n"))
-    assert_array_equal(table.tracks.frame, [7, 9])
-    assert (table.n_frames, table.notes) == (10, ())
+def test_times_of_a_table_stay_when_its_frames_are_counted_anew(tmp_path):
+    table = read(write(tmp_path, "track,frame,time_s,x_um,y_um\na,1,0.5,0,0\na,3,1.5,0,0\n"))
+    assert_array_equal(table.tracks.frame, [0, 2])
+    assert_array_equal(table.tracks.time_s, [0.5, 1.5])
+    assert (table.first_frame, table.n_frames) == (1, 3)
+
+
+def test_a_late_beginning_and_many_rows_are_no_wide_range(tmp_path):
+    late = read(write(tmp_path, f"{HEADER}\na,2000000000,0,0\na,2000999999,0,0\n"))
+    assert (late.first_frame, late.n_frames) == (2_000_000_000, 1_000_000)
+    rows = "".join(f"a,{i * 1000},0,0\n" for i in range(1002))
+    assert read(write(tmp_path, f"{HEADER}\n{rows}")).n_frames == 1_001_001
+
+
+def test_a_frame_far_beyond_the_rows(tmp_path):
+    rows = "b,0,0,0\na,1000000000,0,0\na,0,0,0\n"
+    assert problem(tmp_path, f"{HEADER}\n{rows}") == (
+        "t.csv, row 3, column 'frame': frame 1000000000 is 1000000000 frames after the first one, "
+        "in a table of 3 rows; expected frame numbers that count images. "
+        "Correct it; a time belongs in the column time_s."
+    )
+
+
+def test_positions_beyond_every_stage(tmp_path):
+    rows = "a,0,0,-1e6\na,1,0,-1.5e6\n"
+    assert problem(tmp_path, f"{HEADER}\n{rows}") == (
+        "t.csv, row 3, column 'y_um': holds a position of -1.5e+06 µm, which no stage reaches; "
+        "expected a position within ±1000000 µm. "
+        "Correct it, or the unit of the column; positions are in µm."
+    )
+    text = f"{HEADER}\na,0,20000,0\n".replace("_um", "_px")
+    assert problem(tmp_path, text, pixel_um=100) == (
+        "t.csv, row 2, column 'x_px': holds a position of 2e+06 µm, which no stage reaches; "
+        "expected a position within ±1000000 µm. Correct it, or pixel_um in the assay sheet."
+    )
+
+
+@pytest.mark.parametrize("name", ["t.csv", "t.parquet"])
+def test_a_column_that_stands_for_two(tmp_path, name):
+    table = pd.DataFrame({"track": ["a"], "frame": [0], "y": [1.0]})
+    content = table if name == "t.parquet" else table.to_csv(index=False)
+    assert problem(tmp_path, content, name=name, x_um="y", y_um="y") == (
+        f"{name}: the column 'y' is named for both x_um and y_um; expected a column of its own for "
+        "each of them. Correct [columns] in the settings file."
+    )
+
+
+@pytest.mark.parametrize("name", ["t.csv", "t.parquet"])
+def test_a_pipe_is_not_waited_for(tmp_path, name):
+    os.mkfifo(tmp_path / name)
+    with pytest.raises(InputError) as caught:
+        read(tmp_path / name)
+    assert str(caught.value) == (
+        f"{name}: is a pipe or a device, not a file on disk; expected a track table. "
+        "Save it as a file first."
+    )
+
+
+@pytest.mark.parametrize("name", ["t.csv", "t.parquet"])
+def test_columns_are_found_in_the_header(tmp_path, name):
+    table = pd.DataFrame({"track": ["a"], "frame": [0], "x_um": [1.0], "y_um": [None]})
+
+    def look(table):
+        content = table if name == "t.parquet" else table.to_csv(index=False)
+        require_columns(write(tmp_path, content, name), columns=ColumnSettings(), called=name)
+
+    look(table)
+    with pytest.raises(InputError, match="the column 'frame' is missing"):
+        look(table.drop(columns="frame"))
+
+
+def test_cells_of_no_width_are_empty(tmp_path):
+    tracks = read(write(tmp_path, f"{HEADER},length_um\n\u200ba,0,1\u200b,0,\u200b\n")).tracks
+    assert (list(tracks.label), tracks.x_um[0], tracks.length_um) == (["a"], 1.0, None)
+    message = problem(tmp_path, f"{HEADER}\na,0,\u200b,0\n")
+    assert message == f"t.csv, row 2, column 'x_um': is empty; expected {UM}. {FILL}"
 
 
 def test_empty_optional_columns_are_no_columns(tmp_path):
@@ -444,6 +517,7 @@ def tracks(draw):
         return np.array(draw(st.lists(elements, min_size=n, max_size=n)), dtype=float)
 
     frame = np.concatenate(frames).astype(np.int64)
+    frame -= frame.min()
     heading = column(st.floats(-math.pi, math.pi) | st.just(math.nan))
     return interval, Tracks(
         label=np.array(labels),
