@@ -19,6 +19,7 @@ Bools = NDArray[np.bool_]
 # short of the usual by more than chance: the shortfall of n positions from their median has mean
 # 0.31 n and variance n, as half a χ² with 2 degrees of freedom. One such track could rule the sum.
 _MEAN_SHORTFALL, _SHORTFALL_SDS, _SHORTFALL_FLOOR = 0.31, 6.0, 10.0
+_FEWEST_TRACKS = 5
 # Positions at the start of a track whose density is compared with that of the same position in
 # other tracks: the heading is not known there yet.
 _N_FIRST = 8
@@ -125,10 +126,10 @@ def _fit_group(
         before = used.copy()
         # All are judged anew: what is strange to a poor first guess need not stay so.
         used[judged] = ~_strange(every, start)
+        if not used.any():
+            return _failed(len(counts), len(names), "its tracks are too unlike each other to fit")
         if np.array_equal(used, before):
             break
-        if not used.any():
-            return _failed(len(counts), len(names), "its tracks are too few and too unlike to fit")
         data = _data(members, used)
         fit = fit_likelihood(data, free=names, start=start)
         if fit.problem:
@@ -160,7 +161,12 @@ def _named(fit: LikelihoodFit) -> dict[str, float]:
 
 
 def _strange(data: GlidingData, values: Mapping[str, float]) -> Bools:
-    """Tracks that these parameters make far less likely than the others, (m,)."""
+    """Tracks that these parameters make far less likely than the others, (m,).
+
+    Among very few there is no usual track, so none of them is strange.
+    """
+    if len(data.offsets) - 1 < _FEWEST_TRACKS:
+        return np.zeros(len(data.offsets) - 1, dtype=bool)
     density = data.filtered(values).log_density
     place = np.arange(len(density)) - np.repeat(data.offsets[:-1], np.diff(data.offsets))
     usual = np.zeros(len(density))
