@@ -8,6 +8,8 @@ from pathlib import Path
 from glidefit.errors import InputError, OutputError
 from glidefit.results import StudyResult
 
+_UNEDITED = "Take the results.json of a finished run, or run the analysis again."
+
 
 def pages_of(result: StudyResult) -> dict[str, str]:
     """Text of every page by its name in the run folder."""
@@ -55,8 +57,16 @@ def _check_slugs(source: Path, result: StudyResult) -> None:
                 str(source),
                 f"the slug of condition {condition.condition!r} is {condition.slug!r}",
                 expected="a name of a-z, 0-9 and hyphens, as a run writes it",
-                remedy="Take the results.json of a finished run, or run the analysis again.",
+                remedy=_UNEDITED,
             )
+    slugs = [condition.slug for condition in result.conditions]
+    if not slugs or len(set(slugs)) < len(slugs):
+        raise InputError(
+            str(source),
+            "two conditions have the same slug" if slugs else "it has no conditions",
+            expected="conditions, each with a slug of its own",
+            remedy=_UNEDITED,
+        )
 
 
 def _replace(path: Path, text: str) -> None:

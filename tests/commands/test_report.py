@@ -64,6 +64,25 @@ def test_results_that_name_a_page_outside_the_folder(desk, run, slug):
     assert desk.files() == before
 
 
+@pytest.mark.parametrize(
+    ("edit", "found"),
+    [
+        (lambda c: [c[0], c[0]], "two conditions have the same slug"),
+        (lambda c: [], "it has no conditions"),
+    ],
+)
+def test_results_whose_pages_would_overwrite_each_other(desk, run, edit, found):
+    data = json.loads(desk.files(run)["results.json"])
+    data["conditions"] = edit(data["conditions"])
+    desk.write("odd/results.json", json.dumps(data))
+    said = desk.glidefit("report", "odd")
+    assert (said.code, said.out) == (3, "")
+    assert said.err == (
+        f"Error: odd/results.json: {found}; expected conditions, each with a slug of its own. Take "
+        "the results.json of a finished run, or run the analysis again.\n"
+    )
+
+
 def test_page_that_cannot_be_written(desk, run):
     (desk.folder / "run/index.html").unlink()
     (desk.folder / "run/index.html/x").mkdir(parents=True)
