@@ -153,6 +153,8 @@ def filter_tracks(
     m = len(offsets) - 1
     log_density, innovation, last = np.empty(len(x)), np.empty((len(x), 2)), np.empty((m, 4))
     _filter(time_s, x, y, offsets, relative_error, model, log_density, innovation, last)
+    # Where the filter has lost a track altogether, the position is impossible.
+    log_density[~np.isfinite(log_density)] = -np.inf
     return FilteredTracks(
         log_likelihood=np.add.reduceat(log_density, offsets[:-1]) if m else np.empty(0),
         log_density=log_density,
