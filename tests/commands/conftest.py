@@ -163,6 +163,7 @@ def process(tmp_path):
             text=True,
             env=os.environ | {"OPENBLAS_NUM_THREADS": "1"},
             check=False,
+            timeout=600,
         )
         return Said(done.returncode, done.stdout, done.stderr)
 
