@@ -20,6 +20,8 @@ Clock = Literal["per_time", "per_path"]
 # deviation of 1/1.3 of their distance: their sum is flat to 1 part in 10^4.
 _N_HEADINGS = 16
 _HEADING_WIDTH = 1 / 1.3
+# Half as many where they reach less far than this, in rad: still closer to each other.
+_NARROW = 0.8
 # They reach to so many standard deviations from the chord of the first positions, or all around.
 _REACH = 5.0
 # Positions after which they are joined into one Gaussian.
@@ -67,6 +69,7 @@ def filter_tracks(
     localization_error: float,
     longitudinal_diffusion: float = 0.0,
     sideways_diffusion: float = 0.0,
+    error_variance_along: float = 0.0,
     speed_spread: float = 0.0,
     turning_rate: float = 0.0,
     turning_rate_spread: float = 0.0,
@@ -109,6 +112,8 @@ def filter_tracks(
         Standard deviation of one coordinate in µm, > 0.
     longitudinal_diffusion, sideways_diffusion : float
         Along and across the heading in µm²/s, >= 0.
+    error_variance_along : float
+        What the localization error has more along the heading than across, in µm², >= 0.
     turning_rate, turning_rate_spread : float
         Mean and standard deviation >= 0 over the population, in rad/s.
     exposure_s : float
@@ -133,6 +138,7 @@ def filter_tracks(
         rotational_diffusion,
         longitudinal_diffusion,
         sideways_diffusion,
+        error_variance_along,
         turning_rate_spread,
     )
     if not speed > 0 or not localization_error > 0 or not min(spreads) >= 0:
@@ -146,23 +152,28 @@ def filter_tracks(
     model[hf.TURNING_RATE], model[hf.TURNING_RATE_VARIANCE] = turning_rate, turning_rate_spread**2
     model[hf.ALONG_NOISE] = 2 * longitudinal_diffusion
     model[hf.ACROSS_NOISE] = 2 * sideways_diffusion
-    model[hf.ERROR_VARIANCE] = localization_error**2
+    model[hf.ERROR_ALONG] = error_variance_along
     model[hf.PER_PATH], model[hf.EXPOSURE] = float(clock == "per_path"), exposure_s
-    if relative_error is None:
-        relative_error = np.ones(len(x))
-    m = len(offsets) - 1
-    log_density, innovation, last = np.empty(len(x)), np.empty((len(x), 2)), np.empty((m, 4))
-    _filter(time_s, x, y, offsets, relative_error, model, log_density, innovation, last)
+    error = np.full(len(x), localization_error**2)
+    if relative_error is not None:
+        error *= relative_error**2
+    m, n = len(offsets) - 1, len(x)
+    log_density, root, innovation = np.empty(n), np.empty(n), np.empty((n, 2))
+    states = np.empty((m, hf.N_STATE))
+    order = np.argsort(offsets[:-1] - offsets[1:], kind="stable")
+    _filter(time_s, (x, y, error), offsets, order, model, log_density, root, innovation, states)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        log_density -= np.log(root)
     # Where the filter has lost a track altogether, the position is impossible.
     log_density[~np.isfinite(log_density)] = -np.inf
     return FilteredTracks(
         log_likelihood=np.add.reduceat(log_density, offsets[:-1]) if m else np.empty(0),
         log_density=log_density,
         innovation=innovation,
-        speed_mean=last[:, 0],
-        speed_sd=last[:, 1],
-        turning_rate_mean=last[:, 2],
-        turning_rate_sd=last[:, 3],
+        speed_mean=states[:, 3],
+        speed_sd=np.sqrt(np.maximum(states[:, 17], 0.0)),
+        turning_rate_mean=states[:, 4],
+        turning_rate_sd=np.sqrt(np.maximum(states[:, 19], 0.0)),
     )
 
 
@@ -182,41 +193,84 @@ def _check_times(time_s: Floats, offsets: Ints, exposure_s: float) -> None:
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
 def _filter(
     time: Floats,
-    x: Floats,
-    y: Floats,
+    position: tuple[Floats, Floats, Floats],
     offsets: Ints,
-    relative_error: Floats,
+    order: Ints,
     model: Floats,
     log_density: Floats,
+    root: Floats,
     innovation: Floats,
-    last: Floats,
+    states: Floats,
 ) -> None:
-    s = np.empty(hf.N_STATE)
-    states = np.empty((_N_HEADINGS, hf.N_STATE))
+    """Filter all tracks; those next to each other in ``order``, long ones first, together.
+
+    ``position`` is x, y and the variance of their errors. ``log_density`` still lacks minus the
+    logarithm of ``root``; ``states`` are those at the ends of the tracks.
+    """
+    x, y, error = position
+    headings = np.zeros((_N_HEADINGS // hf.LANES, hf.N_WORK))
     weights = np.empty(_N_HEADINGS)
-    error = relative_error * relative_error * model[hf.ERROR_VARIANCE]
     for k in range(len(offsets) - 1):
-        first, stop = offsets[k], offsets[k + 1]
-        joined = min(first + _N_FIRST, stop)
-        _first_positions(
+        first = offsets[k]
+        joined = min(first + _N_FIRST, offsets[k + 1])
+        n = _first_positions(
             time[first:joined],
             x[first:joined],
             y[first:joined],
             error[first:joined],
             model,
-            states,
+            headings,
             weights,
             log_density[first:joined],
         )
-        _join(states, weights, s)
+        _join(headings, weights[:n], states[k])
         innovation[first:joined] = np.nan
-        for j in range(joined, stop):
-            dark = time[j] - time[j - 1] - model[hf.EXPOSURE]
-            if dark > 0:
-                hf.advance(s, model, dark)
-            log_density[j] = hf.observe(s, model, x[j], y[j], error[j], innovation[j])
-        last[k, 0], last[k, 1] = s[3], math.sqrt(max(s[17], 0.0))
-        last[k, 2], last[k, 3] = s[4], math.sqrt(max(s[19], 0.0))
+        root[first:joined] = 1.0
+    w = np.zeros(hf.N_WORK)
+    for g in range(0, len(order), hf.LANES):
+        together = order[g : g + hf.LANES]
+        for lane in range(hf.LANES):  # lanes without a track repeat another
+            for i in range(hf.N_STATE):
+                w[i * hf.LANES + lane] = states[together[lane % len(together)], i]
+        longest = offsets[together[0] + 1] - offsets[together[0]]
+        for j in range(_N_FIRST, longest):
+            _see(time, position, offsets, together, j, model, w)
+            hf.advance(w, model)
+            hf.observe(w, model)
+            for lane in range(len(together)):
+                k = together[lane]
+                row = offsets[k] + j
+                if row < offsets[k + 1]:
+                    z0, z1 = w[hf.Z0 + lane], w[hf.Z1 + lane]
+                    log_density[row] = -0.5 * (z0 * z0 + z1 * z1) - hf.LOG_2PI
+                    innovation[row, 0], innovation[row, 1] = z0, z1
+                    root[row] = w[hf.ROOT + lane]
+                    if row == offsets[k + 1] - 1:
+                        for i in range(hf.N_STATE):
+                            states[k, i] = w[i * hf.LANES + lane]
+
+
+@njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
+def _see(
+    time: Floats,
+    position: tuple[Floats, Floats, Floats],
+    offsets: Ints,
+    together: Ints,
+    j: int,
+    model: Floats,
+    w: Floats,
+) -> None:
+    """Position number j of each track; a track that has ended waits and sees what it expects."""
+    for lane in range(hf.LANES):
+        k = together[lane % len(together)]
+        row = offsets[k] + j
+        if row < offsets[k + 1]:
+            w[hf.DARK + lane] = max(time[row] - time[row - 1] - model[hf.EXPOSURE], 0.0)
+            w[hf.SEEN_X + lane], w[hf.SEEN_Y + lane] = position[0][row], position[1][row]
+            w[hf.ERROR + lane] = position[2][row]
+        else:
+            w[hf.DARK + lane] = 0.0
+            w[hf.SEEN_X + lane], w[hf.SEEN_Y + lane] = w[lane], w[hf.LANES + lane]
 
 
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
@@ -226,83 +280,104 @@ def _first_positions(
     y: Floats,
     error: Floats,
     model: Floats,
-    states: Floats,
+    headings: Floats,
     weights: Floats,
     log_density: Floats,
-) -> None:
+) -> int:
     """Follow headings from all around through the first positions of a track.
 
-    The logarithms of their weights are left relative to the best.
+    Returns how many; their weights are left relative to the best.
     """
-    best = 0.0
-    middle, distance = _headings(time, x, y, error, model)
-    for i in range(_N_HEADINGS):
-        s = states[i]
-        s[:] = 0.0
-        s[2] = middle + distance * (i - 0.5 * (_N_HEADINGS - 1))
-        s[3], s[4] = model[hf.SPEED], model[hf.TURNING_RATE]
-        s[14] = (_HEADING_WIDTH * distance) ** 2
-        s[17], s[19] = model[hf.SPEED_VARIANCE], model[hf.TURNING_RATE_VARIANCE]
-        hf.begin(s, model, x[0], y[0], error[0])
-        weights[i] = 0.0
-    scratch = np.empty(2)
-    log_density[0] = 0.0
+    middle, reach = _headings(time, x, y, error, model)
+    n = hf.LANES if reach < _NARROW else _N_HEADINGS
+    distance = 2 * reach / n
+    for b in range(n // hf.LANES):
+        w = headings[b]
+        w[: hf.DARK] = 0.0
+        for lane in range(hf.LANES):
+            i = b * hf.LANES + lane
+            w[2 * hf.LANES + lane] = middle + distance * (i - 0.5 * (n - 1))
+        _fill(w, 3, model[hf.SPEED])
+        _fill(w, 4, model[hf.TURNING_RATE])
+        _fill(w, 14, (_HEADING_WIDTH * distance) ** 2)
+        _fill(w, 17, model[hf.SPEED_VARIANCE])
+        _fill(w, 19, model[hf.TURNING_RATE_VARIANCE])
+    logs, roots = np.zeros(n), np.ones(n)
     before = math.log(2 * math.pi / distance)
-    for j in range(1, len(x)):
-        dark = time[j] - time[j - 1] - model[hf.EXPOSURE]
-        highest = -np.inf
-        for i in range(_N_HEADINGS):
-            if weights[i] < best - _HOPELESS:
+    log_density[0] = 0.0
+    weights[:n] = 1.0
+    for j in range(len(x)):
+        dark = max(time[j] - time[max(j - 1, 0)] - model[hf.EXPOSURE], 0.0)
+        for b in range(n // hf.LANES):
+            w = headings[b]
+            for lane in range(hf.LANES):
+                w[hf.DARK + lane] = dark
+                w[hf.SEEN_X + lane], w[hf.SEEN_Y + lane] = x[j], y[j]
+                w[hf.ERROR + lane] = error[j]
+            if j == 0:
+                hf.begin(w, model)
                 continue
-            if dark > 0:
-                hf.advance(states[i], model, dark)
-            weights[i] += hf.observe(states[i], model, x[j], y[j], error[j], scratch)
-            highest = max(highest, weights[i])
-        best = highest
-        total = best + math.log(_sum_of_exp(weights, best))
-        log_density[j] = total - before
-        before = total
-    for i in range(_N_HEADINGS):
-        weights[i] -= best
+            hf.advance(w, model)
+            hf.observe(w, model)
+            for lane in range(hf.LANES):
+                z0, z1 = w[hf.Z0 + lane], w[hf.Z1 + lane]
+                logs[b * hf.LANES + lane] -= 0.5 * (z0 * z0 + z1 * z1)
+                roots[b * hf.LANES + lane] *= w[hf.ROOT + lane]
+        if j > 0:
+            best = -np.inf
+            for i in range(n):
+                if logs[i] > best:
+                    best = logs[i]
+            total = 0.0
+            for i in range(n):
+                weight = 0.0
+                if logs[i] > best - _HOPELESS:
+                    weight = hf.exp(logs[i] - best) / roots[i]
+                weights[i] = weight
+                total += weight
+            after = best + math.log(total) - j * hf.LOG_2PI
+            log_density[j] = after - before
+            before = after
+    return n
+
+
+@njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
+def _fill(w: Floats, number: int, value: float) -> None:
+    w[number * hf.LANES : (number + 1) * hf.LANES] = value
 
 
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
 def _headings(
     time: Floats, x: Floats, y: Floats, error: Floats, model: Floats
 ) -> tuple[float, float]:
-    """Middle and distance of the headings at the start that the first positions leave possible."""
+    """Middle and reach of the headings at the start that the first positions leave possible."""
     chord = math.atan2(y[-1] - y[0], x[-1] - x[0])
     spent = time[-1] - time[0]
     way = max(model[hf.SPEED] * spent, 1e-300)
     variance = (error[0] + error[-1] + model[hf.ACROSS_NOISE] * spent) / way / way
+    variance += 2 * model[hf.ERROR_ALONG] / way / way
     variance += model[hf.TURN_NOISE] * spent / 3
     variance += model[hf.TURNING_RATE_VARIANCE] * spent * spent / 4
     reach = min(math.pi, _REACH * math.sqrt(variance))
-    return chord - 0.5 * model[hf.TURNING_RATE] * spent, 2 * reach / _N_HEADINGS
+    return chord - 0.5 * model[hf.TURNING_RATE] * spent, reach
 
 
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
-def _sum_of_exp(weights: Floats, best: float) -> float:
-    total = 0.0
-    for weight in weights:
-        if weight >= best - _HOPELESS:
-            total += math.exp(weight - best)
-    return total
-
-
-@njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
-def _join(states: Floats, weights: Floats, s: Floats) -> None:
+def _join(headings: Floats, weights: Floats, s: Floats) -> None:
     """One Gaussian state with the mean and covariance of all."""
+    n = hf.LANES
+    total = weights.sum()
     s[:] = 0.0
-    total = _sum_of_exp(weights, 0.0)
-    for i in range(_N_HEADINGS):
-        if weights[i] >= -_HOPELESS:
-            s += math.exp(weights[i]) / total * states[i]
-    for i in range(_N_HEADINGS):
-        if weights[i] >= -_HOPELESS:
-            weight = math.exp(weights[i]) / total
+    for i in range(len(weights)):
+        if weights[i] > 0:
+            w, lane, share = headings[i // n], i % n, weights[i] / total
+            for k in range(hf.N_STATE):
+                s[k] += share * w[k * n + lane]
+    for i in range(len(weights)):
+        if weights[i] > 0:
+            w, lane, share = headings[i // n], i % n, weights[i] / total
             place = 5
             for a in range(5):
                 for b in range(a, 5):
-                    s[place] += weight * (states[i, a] - s[a]) * (states[i, b] - s[b])
+                    s[place] += share * (w[a * n + lane] - s[a]) * (w[b * n + lane] - s[b])
                     place += 1
