@@ -127,6 +127,22 @@ _ALL = (
         meaning="Mean rate of turning of circling paths; positive is clockwise on the screen.",
     ),
     Quantity(
+        key="sideways_diffusion_um2_s",
+        symbol="D⊥",
+        unit="µm²/s",
+        label="sideways diffusion",
+        formula="MSD gains 2 D⊥ t",
+        meaning="Diffusion across the heading, of free swimmers; a filament follows its path.",
+    ),
+    Quantity(
+        key="further_error_along_um",
+        symbol="",
+        unit="µm",
+        label="further error along",
+        formula="√(σ∥² − σ²)",
+        meaning="What the localization error has more along the heading than across it.",
+    ),
+    Quantity(
         key="frame_speed_um_s",
         symbol="",
         unit="µm/s",

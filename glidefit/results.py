@@ -311,6 +311,10 @@ def _record(kind: type[_Record], data: dict[str, Any]) -> _Record:
     if missing := [name for name in needed if name not in data]:
         raise ValueError(f"{kind.__name__}: key {missing[0]!r} is missing")
     there = [f.name for f in fields if f.name in data]
+    if kind is ConditionResult:
+        unknown = _plain(Estimate(problem="not estimated by the version that made this run"))
+        added = {key: unknown for key in QUANTITIES if key not in data["estimates"]}
+        data = data | {"estimates": data["estimates"] | added}
     return kind(**{name: _typed(hints[name], data[name]) for name in there})
 
 

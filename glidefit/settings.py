@@ -7,8 +7,9 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, Literal, get_args, get_origin
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, field_validator
 
+from glidefit import fit_parameters
 from glidefit.errors import InputError, InputErrors
 
 
@@ -104,6 +105,18 @@ class FitSettings(_Section):
         "",
         "Whether paths turn steadily; chosen by practical size and at the level of chambers.",
     )
+    clock: Literal["per_path", "per_time"] = setting(
+        "per_path",
+        "",
+        "Whether the heading diffuses with the path travelled, as where the free tip lays it, or "
+        "with time.",
+    )
+    parameters: str | None = setting(
+        None,
+        "",
+        "Parameters of the likelihood that are known (name = value), bounded (low < name < high) "
+        "or freed (sideways_diffusion_um2_s = free), separated by commas.",
+    )
     bend: float = setting(
         0.15,
         "rad²",
@@ -130,6 +143,20 @@ class FitSettings(_Section):
     field_height: float | None = setting(
         None, "µm", "Height of the field for track tables, likewise.", gt=0
     )
+
+    @field_validator("parameters")
+    @classmethod
+    def _readable(cls, text: str | None) -> str | None:
+        if text is not None:
+            fit_parameters.parse(text)
+        return text
+
+    @property
+    def known(self) -> fit_parameters.FitParameters:
+        """What ``parameters`` says."""
+        if self.parameters is None:
+            return fit_parameters.FitParameters()
+        return fit_parameters.parse(self.parameters)
 
 
 class IntervalSettings(_Section):
@@ -322,6 +349,10 @@ def _invalid(
     message = _PLAIN.get(error["type"]) or error["msg"].removeprefix("Input should be ")
     message = message.replace("'", "")
     unit = f" ({declared.unit})" if declared.unit else ""
+    if error["type"] == "value_error":  # from one of our own checks
+        return InputError(
+            where, f"{error['ctx']['error']}", expected="parameters", remedy=declared.help
+        )
     default = "chosen from the data" if declared.default is None else f"{declared.default}"
     return InputError(
         where,

@@ -167,6 +167,15 @@ def test_a_condition_has_an_estimate_of_every_quantity():
         condition_result(condition="k", estimates=incomplete)
 
 
+def test_a_quantity_added_since_is_there_without_a_value():
+    data = study(conditions=(condition_result(),)).to_json()
+    del data["conditions"][0]["estimates"]["sideways_diffusion_um2_s"]
+    (condition,) = StudyResult.from_json(data).conditions
+    added = condition.estimates["sideways_diffusion_um2_s"]
+    assert math.isnan(added.value)
+    assert added.problem == "not estimated by the version that made this run"
+
+
 def test_records_are_frozen():
     with pytest.raises(dataclasses.FrozenInstanceError):
         study().name = "b"

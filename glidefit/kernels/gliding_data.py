@@ -22,6 +22,7 @@ PARAMETERS = (
     "turning_rate",
     "turning_rate_variance",
     "sideways_diffusion",
+    "error_variance_along",
 )
 
 
@@ -49,6 +50,7 @@ class GlidingData:
             localization_error=float(np.sqrt(values["localization_variance"])),
             longitudinal_diffusion=values.get("longitudinal_diffusion", 0.0),
             sideways_diffusion=values.get("sideways_diffusion", 0.0),
+            error_variance_along=values.get("error_variance_along", 0.0),
             speed_spread=float(np.sqrt(values.get("speed_variance", 0.0))),
             turning_rate=values.get("turning_rate", 0.0),
             turning_rate_spread=float(np.sqrt(values.get("turning_rate_variance", 0.0))),
@@ -104,4 +106,5 @@ def first_guess(data: GlidingData) -> dict[str, float]:
         "turning_rate": float(np.mean(np.angle(one.conj() * two))) / wait,
         "turning_rate_variance": float(diffusion / wait / lag),
         "sideways_diffusion": 0.1 * noise * lag / wait,
+        "error_variance_along": 0.2 * noise,
     }

@@ -4,11 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.kernels.gliding_data import PARAMETERS, GlidingData, first_guess
+
+if TYPE_CHECKING:
+    import lmfit
 
 __all__ = [
     "CIRCLING",
@@ -18,6 +22,7 @@ __all__ = [
     "LikelihoodFit",
     "first_guess",
     "fit_likelihood",
+    "fit_parameters",
 ]
 
 Floats = NDArray[np.float64]
@@ -56,7 +61,7 @@ class LikelihoodFit:
         Minus the curvature of the log likelihood of all tracks; rows and columns of parameters
         at their limit are 0.
     at_limit : (p,) array of bool
-        True for a parameter that is 0 and would rather be less.
+        True for a parameter at a limit (0, or one that was given) that would rather be beyond.
     log_likelihood : (m,) array
     n_evaluations : int
         How often all tracks were filtered.
@@ -101,18 +106,34 @@ class _Surface:
     """Log density of every position as a function of p parameters, and its slopes."""
 
     def __init__(
-        self, data: GlidingData, names: Sequence[str], fixed: Mapping[str, float], scale: Floats
+        self,
+        data: GlidingData,
+        names: Sequence[str],
+        fixed: Mapping[str, float],
+        limits: Mapping[str, tuple[float, float]],
+        scale: Floats,
     ) -> None:
         self.data, self.names, self.fixed, self.scale = data, tuple(names), dict(fixed), scale
-        signed = np.array([name in _SIGNED for name in names])
-        kept = np.array([name in _NEVER_ZERO for name in names])
-        self.lowest = np.where(signed, -np.inf, np.where(kept, 1e-3 * scale, 0.0))
+        self.signed = np.array([name in _SIGNED for name in names], dtype=bool)
+        kept = np.array([name in _NEVER_ZERO for name in names], dtype=bool)
+        own = np.where(self.signed, -np.inf, np.where(kept, 1e-3 * scale, 0.0))
+        given = np.array([limits.get(name, (-np.inf, np.inf)) for name in names]).reshape(-1, 2)
+        self.lowest, self.highest = np.maximum(own, given[:, 0]), given[:, 1]
         self.n_evaluations = 0
 
     def __call__(self, values: Floats) -> Floats:
         self.n_evaluations += 1
         named = dict(zip(self.names, map(float, values), strict=True))
         return self.data.filtered(self.fixed | named).log_density
+
+    def inside(self, values: Floats) -> Floats:
+        """The values brought within their limits."""
+        return np.clip(values, self.lowest, self.highest)
+
+    def outward(self, values: Floats, slope: Floats) -> Bools:
+        """Parameters at a limit beyond which the likelihood rises."""
+        below = (values <= self.lowest) & (slope <= 0)
+        return np.asarray(below | (values >= self.highest) & (slope >= 0))
 
     def slopes(self, values: Floats, here: Floats) -> Floats:
         """By forward differences, (n, p)."""
@@ -121,7 +142,7 @@ class _Surface:
             (self(values + step * unit) - here) / step
             for step, unit in zip(steps, np.eye(len(values)), strict=True)
         ]
-        return np.stack(columns, axis=1)
+        return np.stack(columns, axis=1) if columns else np.zeros((len(here), 0))
 
 
 def fit_likelihood(
@@ -130,6 +151,7 @@ def fit_likelihood(
     free: Sequence[str] = STRAIGHT,
     fixed: Mapping[str, float] | None = None,
     start: Mapping[str, float] | None = None,
+    limits: Mapping[str, tuple[float, float]] | None = None,
 ) -> LikelihoodFit:
     """Maximise the likelihood of all tracks together.
 
@@ -145,13 +167,15 @@ def fit_likelihood(
     start : mapping, optional
         First guess of every free parameter; also sets the scale below which a parameter counts
         as 0, unless it is 0 itself.
+    limits : mapping, optional
+        (lowest, highest) of free parameters; inside their own limits of 0.
 
     Raises
     ------
     ValueError
         For a name that is no parameter.
     """
-    fixed = dict(fixed or {})
+    fixed, limits = dict(fixed or {}), dict(limits or {})
     if unknown := (set(free) | set(fixed)) - set(PARAMETERS):
         raise ValueError(f"no such parameter: {', '.join(sorted(unknown))}")
     sizes = np.diff(data.offsets)
@@ -162,23 +186,49 @@ def fit_likelihood(
         return _without_optimum(data, free, "the positions do not move")
     scale = np.array([abs(guess[name]) for name in free])
     if start is None:
-        few = _Surface(data.some(_N_TRIED), free, fixed, scale)
+        few = _Surface(data.some(_N_TRIED), free, fixed, limits, scale)
         tries = [
             np.where(np.array(free) == "rotational_diffusion", factor, 1.0)
             * [guess[name] for name in free]
             for factor in _TRIED
         ]
-        climbs = [_climb(few, first, enough=_LITTLE_TO_GAIN) for first in tries]
+        climbs = [_climb(few, few.inside(first), enough=_LITTLE_TO_GAIN) for first in tries]
         first = max(
             climbs, key=lambda climb: float(np.nan_to_num(climb.here.sum(), nan=-np.inf))
         ).values
     else:
         first = np.array([start[name] for name in free], dtype=np.float64)
-    surface = _Surface(data, free, fixed, scale)
-    top = _climb(surface, np.maximum(first, surface.lowest))
+    surface = _Surface(data, free, fixed, limits, scale)
+    top = _climb(surface, surface.inside(first))
     if top.problem:
         return _without_optimum(data, free, top.problem)
     return _at_optimum(surface, top)
+
+
+def fit_parameters(data: GlidingData, parameters: lmfit.Parameters) -> LikelihoodFit:
+    """Maximise the likelihood from parameters of lmfit.
+
+    They hold what is to be fitted (``vary``, with ``value`` as the first guess and ``min`` and
+    ``max`` as limits) and what is known. Fitted values and standard errors are left in them.
+
+    Raises
+    ------
+    ValueError
+        For a name that is no parameter, or one that is an expression of others.
+    """
+    if tied := [name for name, p in parameters.items() if p.expr]:
+        raise ValueError(f"a parameter cannot be an expression of others: {', '.join(tied)}")
+    free = {name: p for name, p in parameters.items() if p.vary}
+    fit = fit_likelihood(
+        data,
+        free=tuple(free),
+        fixed={name: float(p.value) for name, p in parameters.items() if not p.vary},
+        start={name: float(p.value) for name, p in free.items()},
+        limits={name: (float(p.min), float(p.max)) for name, p in free.items()},
+    )
+    for p, value, error in zip(free.values(), fit.values, fit.errors, strict=True):
+        p.value, p.stderr = float(value), float(error)
+    return fit
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -199,7 +249,7 @@ def _climb(surface: _Surface, values: Floats, *, enough: float = _NOTHING_TO_GAI
         return _Climb(values=values, here=here, slopes=np.zeros((0, 0)), problem=problem)
     for _ in range(_MOST_STEPS):
         slopes = surface.slopes(values, here)
-        step, gain = _scoring_step(slopes, values, surface.lowest)
+        step, gain = _scoring_step(slopes, surface.outward(values, slopes.sum(axis=0)))
         if gain < enough:
             break
         trial, there = _uphill(surface, values, step, float(here.sum()))
@@ -232,13 +282,12 @@ def _uphill(
     return best, there
 
 
-def _scoring_step(slopes: Floats, values: Floats, lowest: Floats) -> tuple[Floats, float]:
+def _scoring_step(slopes: Floats, outward: Bools) -> tuple[Floats, float]:
     """Step to the optimum of the parabola, and half of what it promises; limits are kept."""
     slope = slopes.sum(axis=0)
-    moving = (values > lowest) | (slope > 0)
     size = np.sqrt((slopes**2).sum(axis=0))
-    moving &= size > 0
-    step = np.zeros(len(values))
+    moving = ~outward & (size > 0)
+    step = np.zeros(len(slope))
     if not moving.any():
         return step, 0.0
     unit = slopes[:, moving] / size[moving]
@@ -250,10 +299,10 @@ def _scoring_step(slopes: Floats, values: Floats, lowest: Floats) -> tuple[Float
 
 def _within_reach(values: Floats, step: Floats, surface: _Surface) -> Floats:
     """The values after a step in which none more than trebles or leaves its limits."""
-    signed = np.isneginf(surface.lowest)
-    highest = np.where(signed, np.inf, 3 * values + 0.3 * surface.scale)
-    lowest = np.where(signed, -np.inf, np.where(values > 0.01 * surface.scale, values / 4, 0.0))
-    return np.clip(values + step, np.maximum(lowest, surface.lowest), highest)
+    highest = np.where(surface.signed, np.inf, 3 * values + 0.3 * surface.scale)
+    least = np.where(values > 0.01 * surface.scale, values / 4, 0.0)
+    lowest = np.where(surface.signed, -np.inf, least)
+    return surface.inside(np.clip(values + step, lowest, highest))
 
 
 def _at_optimum(surface: _Surface, top: _Climb) -> LikelihoodFit:
@@ -261,9 +310,9 @@ def _at_optimum(surface: _Surface, top: _Climb) -> LikelihoodFit:
     values, here, slopes = top.values, top.here, top.slopes
     size = np.sqrt((slopes**2).sum(axis=0))
     p, offsets = len(values), surface.data.offsets
-    at_limit = (values <= surface.lowest) & (slopes.sum(axis=0) <= 0) | ~(size > 0)
+    at_limit = surface.outward(values, slopes.sum(axis=0)) | ~(size > 0)
     width = 0.2 / np.where(at_limit, np.inf, size)
-    width = np.where(np.isneginf(surface.lowest), width, np.minimum(width, 0.5 * values))
+    width = np.where(surface.signed, width, np.minimum(width, 0.5 * values))
     at_limit |= width == 0
     scores = np.add.reduceat(slopes, offsets[:-1], axis=0)
     information = np.zeros((p, p))
@@ -281,7 +330,8 @@ def _at_optimum(surface: _Surface, top: _Climb) -> LikelihoodFit:
             mixed = (both - above[i] - above[j]) / (width[i] * width[j])
             information[i, j] = information[j, i] = -mixed
     kept = information[np.ix_(free, free)]
-    fine = len(free) > 0 and np.all(np.isfinite(kept)) and np.linalg.eigvalsh(kept).min() > 0
+    definite = len(free) > 0 and np.all(np.isfinite(kept)) and np.linalg.eigvalsh(kept).min() > 0
+    fine = definite or p == 0
     return LikelihoodFit(
         names=surface.names,
         values=values,

@@ -108,6 +108,18 @@ def condition_numbers(
     known |= uncertainty.estimates(motile, motility.COLUMNS, settings=interval)
     if fitted.model != "circling":
         del known["turning_rate_rad_s"]
+    given = settings.fit.known
+    for name, key in (
+        ("sideways_diffusion", "sideways_diffusion_um2_s"),
+        ("error_variance_along", "further_error_along_um"),
+    ):
+        if name not in given.freed and name not in given.fixed:
+            del known[key]
+    for key in given.held:
+        if key in known:
+            known[key] = Estimate(
+                value=known[key].value, level=interval.level, method="held at the value given"
+            )
     known["smallest_speed_um_s"] = summarise.smallest_speed(recordings, level=interval.level)
     return ConditionNumbers(
         fitted=fitted, gliding=gliding, combined=combined, motile=motile, estimates=known

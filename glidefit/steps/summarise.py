@@ -28,6 +28,8 @@ _NOT_IN_MODEL = {
     "mean_speed_um_s": "not fitted: the active model knows no pauses",
     "running_fraction": "not fitted: the active model knows no pauses",
     "turning_rate_rad_s": "not fitted: no steady turning of a size that matters was seen",
+    "sideways_diffusion_um2_s": "not fitted: a filament follows its path; a setting frees it",
+    "further_error_along_um": "not fitted: taken as equal in all directions; a setting frees it",
 }
 # Fewer innovations say nothing of their distribution.
 _FEWEST_INNOVATIONS = 200

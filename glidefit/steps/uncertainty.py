@@ -218,6 +218,12 @@ RULES = {
         unresolved="not resolved: filaments differ by less than the measurement can tell",
     ),
     "turning_rate_rad_s": _Rule(columns=("turning_rate",), scale=lambda w: w),
+    "sideways_diffusion_um2_s": _Rule(
+        columns=("sideways_diffusion",), scale=lambda d: d, below=0.0, unresolved=_NOISE
+    ),
+    "further_error_along_um": _Rule(
+        columns=("error_variance_along",), scale=lambda s: s, back=_root, unresolved=_NOISE
+    ),
     "frame_speed_um_s": _Rule(columns=("frame_speed",), scale=lambda v: v, below=0.0),
     "motile_fraction": _Rule(
         columns=("motile_fraction",), scale=lambda f: f, below=0.0, beyond=1.0

@@ -1,5 +1,6 @@
 """The likelihood of gliding tracks: against slow versions of itself, symmetries, and its fit."""
 
+import lmfit
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -10,7 +11,7 @@ from scipy import stats
 from glidefit.kernels.bound import exposed_wiener
 from glidefit.kernels.gliding_data import GlidingData
 from glidefit.kernels.likelihood import filter_tracks
-from glidefit.kernels.likelihood_fit import CIRCLING, STRAIGHT, fit_likelihood
+from glidefit.kernels.likelihood_fit import CIRCLING, STRAIGHT, fit_likelihood, fit_parameters
 from glidefit.steps.simulate import ScenarioCondition, clean_tracks
 
 KINESIN = {
@@ -408,6 +409,88 @@ def test_small_simulated_experiments_are_unbiased():
     relative = fit.errors[:2] / fit.values[:2]
     assert abs(fit.values[0] / 4.0 - 1) < 0.002 + 3 * relative[0]
     assert abs(fit.values[1] / 0.2 - 1) < 0.02 + 3 * relative[1]
+
+
+def lmfit_parameters(start, **given):
+    parameters = lmfit.Parameters()
+    for name, value in start.items():
+        parameters.add(name, value=value)
+    for name, more in given.items():
+        parameters[name].set(**more)
+    return parameters
+
+
+def test_parameters_of_lmfit_are_fitted_and_get_their_errors(fitted):
+    tracks, fit = fitted
+    start = dict(zip(fit.names, 0.9 * fit.values, strict=True))
+    parameters = lmfit_parameters(start)
+    other = fit_parameters(data_of(tracks), parameters)
+    found = np.array([p.value for p in parameters.values()])
+    assert np.all(np.abs(found - fit.values) < 0.04 * fit.errors)
+    assert_allclose([p.stderr for p in parameters.values()], other.errors)
+
+
+def test_a_parameter_that_is_held_stays_and_the_others_follow(fitted):
+    tracks, fit = fitted
+    start = dict(zip(fit.names, fit.values, strict=True))
+    held = {"longitudinal_diffusion": {"value": 0.006, "vary": False}}
+    other = fit_parameters(data_of(tracks), lmfit_parameters(start, **held))
+    assert "longitudinal_diffusion" not in other.names
+    # Twice the diffusion leaves less for the localization error.
+    assert dict(zip(other.names, other.values, strict=True))["localization_variance"] < (
+        start["localization_variance"] - 2 * fit.errors[3]
+    )
+    assert other.log_likelihood.sum() < fit.log_likelihood.sum()
+
+
+@pytest.mark.parametrize(("limit", "side"), [("max", 0.9), ("min", 1.1)])
+def test_a_bound_is_kept_and_said(fitted, limit, side):
+    tracks, fit = fitted
+    start = dict(zip(fit.names, fit.values, strict=True))
+    bound = side * start["rotational_diffusion"]
+    bounded = {"rotational_diffusion": {"value": bound * side, limit: bound}}
+    other = fit_parameters(data_of(tracks), lmfit_parameters(start, **bounded))
+    assert other.problem == ""
+    assert other.values[1] == bound
+    assert other.at_limit[1]
+    assert np.all(other.influence[:, 1] == 0)
+
+
+def test_all_parameters_held():
+    tracks = simulated(5, 20, seed=3)
+    known = {"speed": 0.8, "rotational_diffusion": 0.008, "localization_variance": 0.0009}
+    parameters = lmfit_parameters(known)
+    for p in parameters.values():
+        p.vary = False
+    fit = fit_parameters(data_of(tracks), parameters)
+    assert (fit.problem, fit.names, len(fit.values)) == ("", (), 0)
+    assert np.isfinite(fit.log_likelihood).all()
+
+
+def test_expressions_are_refused(fitted):
+    parameters = lmfit_parameters({"speed": 0.8, "rotational_diffusion": 0.01})
+    parameters["rotational_diffusion"].expr = "speed / 80"
+    with pytest.raises(ValueError, match="rotational_diffusion"):
+        fit_parameters(data_of(fitted[0]), parameters)
+
+
+def test_sideways_diffusion_and_a_further_error_along_are_found():
+    motion = KINESIN | {"longitudinal_diffusion": 0.0}
+    tracks = simulated(40, 100, seed=5, motion=motion)
+    rng = np.random.default_rng(6)
+    # Along the chords of the next steps, which are nearly the headings.
+    x, y = tracks.x_um.copy(), tracks.y_um.copy()
+    for rows in map(tracks.rows, range(40)):
+        heading = np.unwrap(np.angle(np.gradient(x[rows] + 1j * y[rows])))
+        heading = np.convolve(np.pad(heading, 2, mode="edge"), np.ones(5) / 5, mode="valid")
+        further = 0.08 * rng.standard_normal(len(heading))
+        x[rows] += further * np.cos(heading)
+        y[rows] += further * np.sin(heading)
+    data = GlidingData(time_s=tracks.time_s, x=x, y=y, offsets=tracks.offsets)
+    fit = fit_likelihood(data, free=(*STRAIGHT, "error_variance_along"))
+    assert fit.problem == ""
+    assert abs(fit.values[5] - 0.08**2) < 4 * fit.errors[5]
+    assert abs(fit.values[1] - 0.008) < 4 * fit.errors[1]
 
 
 # -- what cannot be fitted, and mistakes ----------------------------------------------------------

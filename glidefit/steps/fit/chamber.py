@@ -9,8 +9,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.evidence import ChamberEvidence
+from glidefit.fit_parameters import FitParameters
 from glidefit.kernels import msd_fit
 from glidefit.kernels.active_brownian import circling_msd
+from glidefit.kernels.likelihood import Clock
 from glidefit.kernels.likelihood_fit import CIRCLING as CIRCLING_NAMES
 from glidefit.kernels.likelihood_fit import STRAIGHT
 from glidefit.kernels.msd_fit import LagCurve, MsdFit
@@ -60,6 +62,8 @@ def fit_chamber(
     pooled: MsdFit,
     method: str,
     turning: Turning,
+    known: FitParameters,
+    clock: Clock,
 ) -> ChamberFit:
     """Fit one chamber."""
     parts = [(c, i, i.of(members)) for c, i in zip(columns, intervals, strict=True)]
@@ -78,9 +82,10 @@ def fit_chamber(
     own, left_out, problem = None, 0, from_msd.problem
     if method == "likelihood":
         circles = turning.model == CIRCLING
-        names = CIRCLING_NAMES if circles else STRAIGHT
+        names = (*(CIRCLING_NAMES if circles else STRAIGHT), *known.freed)
+        names += tuple(name for name in known.fixed if name not in names and name in COLUMN)
         start = _likely_start(from_msd, pooled, lasting[0], turning if circles else None)
-        own = fit_chamber_likelihood(ordered, names=names, start=start)
+        own = fit_chamber_likelihood(ordered, names=names, start=start, known=known, clock=clock)
         there = [COLUMN[name] for name in names]
         values[there], influence[:, there] = own.values, own.influence
         problem = own.problem
@@ -198,6 +203,12 @@ def _fill_msd(
         return
     values[columns.model] = _predicted(curve, fitted)
     influence[:, columns.model] = influence[:, names] @ _slope(curve, fitted)
+    # Filaments of which a person says so also diffuse sideways, or err more along their heading.
+    sideways = 2 * (curve.lag_s - curve.exposure_s / 3)
+    for name, slope in (("sideways_diffusion", sideways), ("error_variance_along", 2.0)):
+        if np.isfinite(values[COLUMN[name]]):
+            values[columns.model] += values[COLUMN[name]] * slope
+            influence[:, columns.model] += influence[:, [COLUMN[name]]] * slope
 
 
 def _predicted(curve: LagCurve, fitted: Floats) -> Floats:

@@ -92,6 +92,8 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
             pooled=pooled,
             method=settings.method,
             turning=turning,
+            known=settings.known,
+            clock=settings.clock,
         )
         for members in chambers.values()
     ]

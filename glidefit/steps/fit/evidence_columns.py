@@ -23,6 +23,8 @@ SCALARS = (
     "msd_rotational_diffusion",
     "turning_rate",  # of circling paths
     "turning_rate_variance",
+    "sideways_diffusion",  # where a person frees it
+    "error_variance_along",
 )
 COLUMN = {name: i for i, name in enumerate(SCALARS)}
 

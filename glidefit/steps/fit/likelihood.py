@@ -3,14 +3,20 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
+from glidefit.fit_parameters import FitParameters
 from glidefit.kernels.gliding_data import GlidingData, first_guess
-from glidefit.kernels.likelihood_fit import LikelihoodFit, fit_likelihood
+from glidefit.kernels.likelihood import Clock
+from glidefit.kernels.likelihood_fit import LikelihoodFit, fit_parameters
 from glidefit.steps.fit.intervals import Kept
+
+if TYPE_CHECKING:
+    import lmfit
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -58,7 +64,12 @@ class ChamberLikelihood:
 
 
 def fit_chamber_likelihood(
-    members: Sequence[Kept], *, names: Sequence[str], start: Mapping[str, float] | None
+    members: Sequence[Kept],
+    *,
+    names: Sequence[str],
+    start: Mapping[str, float] | None,
+    known: FitParameters,
+    clock: Clock,
 ) -> ChamberLikelihood:
     """Maximise the likelihood of a chamber's kept tracks, strange ones left out.
 
@@ -70,14 +81,18 @@ def fit_chamber_likelihood(
     names : sequence of str
         Parameters to fit, the speed first.
     start : mapping or None
-        First guess of each; taken from the tracks if None.
+        First guess; what is not in it, or all if None, is taken from the tracks.
+    known : FitParameters
+        Parameters that are held or bounded.
+    clock : {"per_path", "per_time"}
+        What the heading diffuses with.
     """
     groups: dict[tuple[float, float], list[int]] = {}
     for i, one in enumerate(members):
         key = (round(one.source.frame_s, 6), round(one.source.exposure_s, 6))
         groups.setdefault(key, []).append(i)
     parts = {
-        tuple(places): _fit_group([members[i] for i in places], names, start)
+        tuple(places): _fit_group([members[i] for i in places], names, start, known, clock)
         for places in groups.values()
     }
     if len(parts) == 1:
@@ -113,14 +128,17 @@ def _averaged(
 
 
 def _fit_group(
-    members: Sequence[Kept], names: Sequence[str], start: Mapping[str, float] | None
+    members: Sequence[Kept],
+    names: Sequence[str],
+    start: Mapping[str, float] | None,
+    known: FitParameters,
+    clock: Clock,
 ) -> ChamberLikelihood:
     counts = np.concatenate([one.tracks.n_positions for one in members])
     judged = counts >= 2
-    every = _data(members, judged)
-    if start is None:
-        guess = first_guess(every)
-        start = {name: guess[name] for name in names}
+    every = _data(members, judged, clock)
+    guess = first_guess(every) | dict(start or {}) | known.fixed
+    start = {name: guess[name] for name in names}
     used = np.zeros(len(counts), dtype=bool)
     for _ in range(_ROUNDS):
         before = used.copy()
@@ -130,15 +148,47 @@ def _fit_group(
             return _failed(len(counts), len(names), "its tracks are too unlike each other to fit")
         if np.array_equal(used, before):
             break
-        data = _data(members, used)
-        fit = fit_likelihood(data, free=names, start=start)
+        data = _data(members, used, clock)
+        fit = _with_known(fit_parameters(data, _parameters(start, known)), names, known)
         if fit.problem:
             return _failed(len(counts), len(names), fit.problem)
         start = _named(fit)
-    return _with_mean_over_frames(data, fit, counts, used)
+    return _with_mean_over_frames(data, fit, counts, used, held="speed" in known.fixed)
 
 
-def _data(members: Sequence[Kept], used: Bools) -> GlidingData:
+def _parameters(start: Mapping[str, float], known: FitParameters) -> lmfit.Parameters:
+    """The first guess with what is held and bounded."""
+    import lmfit
+
+    parameters = lmfit.Parameters()
+    for name, value in start.items():
+        low, high = known.limits.get(name, (-np.inf, np.inf))
+        parameters.add(name, value=value, min=low, max=high, vary=name not in known.fixed)
+    return parameters
+
+
+def _with_known(fit: LikelihoodFit, names: Sequence[str], known: FitParameters) -> LikelihoodFit:
+    """The fit with what was held among its values; no track moves that."""
+    if fit.names == tuple(names):
+        return fit
+    place = [names.index(name) for name in fit.names]
+    values = np.array([known.fixed.get(name, np.nan) for name in names])
+    scores = np.zeros((len(fit.scores), len(names)))
+    information = np.zeros((len(names), len(names)))
+    at_limit = np.ones(len(names), dtype=bool)
+    values[place], scores[:, place], at_limit[place] = fit.values, fit.scores, fit.at_limit
+    information[np.ix_(place, place)] = fit.information
+    return replace(
+        fit,
+        names=tuple(names),
+        values=values,
+        scores=scores,
+        information=information,
+        at_limit=at_limit,
+    )
+
+
+def _data(members: Sequence[Kept], used: Bools, clock: Clock) -> GlidingData:
     """The tracks used, one recording after the other."""
     rows = np.repeat(used, np.concatenate([one.tracks.n_positions for one in members]))
     counts = np.concatenate([one.tracks.n_positions for one in members])[used]
@@ -153,6 +203,7 @@ def _data(members: Sequence[Kept], used: Bools) -> GlidingData:
         y=np.concatenate([one.tracks.y_um for one in members])[rows],
         offsets=offsets,
         exposure_s=min(exposure, float(wait.min(initial=np.inf))),
+        clock=clock,
     )
 
 
@@ -180,7 +231,7 @@ def _strange(data: GlidingData, values: Mapping[str, float]) -> Bools:
 
 
 def _with_mean_over_frames(
-    data: GlidingData, fit: LikelihoodFit, counts: NDArray[np.int64], used: Bools
+    data: GlidingData, fit: LikelihoodFit, counts: NDArray[np.int64], used: Bools, *, held: bool
 ) -> ChamberLikelihood:
     """The optimum with the mean speed taken over filament-frames.
 
@@ -197,7 +248,7 @@ def _with_mean_over_frames(
     influence = np.zeros((len(counts), len(fit.values)))
     influence[used] = fit.influence
     values = fit.values.copy()
-    if weight.sum() > 0:
+    if weight.sum() > 0 and not held:
         values[0] = float(weight @ np.where(tells, own, 0.0) / weight.sum())
         influence[used, 0] = weight * (np.where(tells, own, 0.0) - values[0]) / weight.sum()
     speed, speed_error = np.full(len(counts), np.nan), np.full(len(counts), np.nan)
