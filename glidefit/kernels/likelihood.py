@@ -47,6 +47,8 @@ class FilteredTracks:
         What each track and its population say of its speed, in µm/s.
     turning_rate_mean, turning_rate_sd : (m,) arrays
         The same of its turning rate, in rad/s.
+    heading_sd : (m,) array
+        How well the heading is known at the end of each track, in rad.
     """
 
     log_likelihood: Floats
@@ -56,6 +58,7 @@ class FilteredTracks:
     speed_sd: Floats
     turning_rate_mean: Floats
     turning_rate_sd: Floats
+    heading_sd: Floats
 
 
 def filter_tracks(
@@ -174,13 +177,14 @@ def filter_tracks(
         speed_sd=np.sqrt(np.maximum(states[:, 17], 0.0)),
         turning_rate_mean=states[:, 4],
         turning_rate_sd=np.sqrt(np.maximum(states[:, 19], 0.0)),
+        heading_sd=np.sqrt(np.maximum(states[:, 14], 0.0)),
     )
 
 
 def _check_times(time_s: Floats, offsets: Ints, exposure_s: float) -> None:
     if len(time_s) < 2:
         return
-    wait = np.diff(time_s)
+    wait = np.diff(time_s).astype(np.float64)
     wait[offsets[1:-1] - 1] = np.inf
     shortest = float(wait.min())
     if not shortest > 0 or not 0 <= exposure_s <= shortest * (1 + 1e-9):
