@@ -92,8 +92,8 @@ def track_information(
         I_ab = ∂aμᵀ P ∂bμ + tr(P ∂aΣ P ∂bΣ) / 2,   P = Σ⁻¹ - Σ⁻¹ B (Bᵀ Σ⁻¹ B)⁻¹ Bᵀ Σ⁻¹
 
     the information of what does not change when the track is moved or rotated. A turning rate
-    bends a path without telling its speed, so ∂μ_across/∂v = 0. Across, all tracks have the mean
-    speed: where speeds differ, D_r can be known a little better than this says.
+    bends a path without telling its speed, so ∂μ_across/∂v = 0. Across, the speed is the track's
+    own, of which the positions along have told ``1/w² = 1/s_v² + q`` (`own_speed_hides`).
 
     Parameters
     ----------
@@ -132,7 +132,7 @@ def track_information(
         means=np.stack([middle, *[0 * ones] * 6]),
         covariances=[none, none, 2 * wiener, unit, drawn, none, none],
     )
-    information += _gaussian_information(
+    across = _gaussian_information(
         localization_error**2 * unit + speed**2 * turning,
         unknown=np.stack([ones, middle], axis=1),
         means=np.stack([*[0 * ones] * 5, speed * curve, 0 * ones]),
@@ -146,7 +146,35 @@ def track_information(
             speed**2 * curved,
         ],
     )
-    return information
+    told = _gaussian_information(
+        along, unknown=ones[:, None], means=middle[None, :], covariances=[none]
+    )
+    own_speed_hides(across, speed_variance=speed_spread**2, told=float(told[0, 0]))
+    return information + across
+
+
+def own_speed_hides(across: Floats, *, speed_variance: float, told: float) -> None:
+    """Take from the information across what a speed of the track's own hides, in place.
+
+    With J across for the track's own speed, its variance w² given the positions along, and
+    r = 1 / (1 + s_v² q), by which the mean speed moves what is expected of it::
+
+        I_θθ = J_θθ - c w² J_vθ J_vθᵀ,  I_vθ = r c J_vθ,  I_vv = r² c J_vv,  c = 1 / (1 + w² J_vv)
+
+    Parameters
+    ----------
+    across : (p, p) array
+        J, the speed first.
+    speed_variance, told : float
+        s_v², and q, the information that the positions along have of the track's speed.
+    """
+    moved = 1 / (1 + speed_variance * told)
+    variance = speed_variance * moved
+    kept = 1 / (1 + variance * across[0, 0])
+    with_speed = across[0].copy()
+    across -= kept * variance * np.outer(with_speed, with_speed)
+    across[0] = across[:, 0] = moved * kept * with_speed
+    across[0, 0] = moved**2 * kept * with_speed[0]
 
 
 def _gaussian_information(

@@ -10,6 +10,7 @@ from glidefit.kernels.bound import (
     exposed_wiener,
     least_relative_error_of_ratio,
     least_standard_errors,
+    own_speed_hides,
     track_information,
 )
 
@@ -64,6 +65,40 @@ def test_mean_speed_is_known_no_better_than_its_spread_between_tracks_allows():
     known = least_standard_errors(information, unknown=["speed", "rotational_diffusion"])
     assert known["speed"] > 0.99 * 0.1
     assert known["speed"] < 0.12
+
+
+def test_rotational_diffusion_is_known_although_speeds_differ():
+    """Each track knows its own speed: 40 tracks of speeds 30 % apart know D_r as alike ones do."""
+    unknown = ["speed", "rotational_diffusion", "localization_variance"]
+    time = np.arange(100) * 0.5
+    alike, apart = (
+        least_standard_errors(
+            track_information(time, speed_spread=spread, **MOTION), unknown=unknown, n_tracks=40
+        )
+        for spread in (0.0, 0.24)
+    )
+    assert_allclose(apart["speed"], 0.24 / 40**0.5, rtol=0.02)
+    ratio = apart["rotational_diffusion"] / alike["rotational_diffusion"]
+    assert 1 < ratio < 1.01
+
+
+def test_bound_across_where_speeds_differ_is_that_of_the_joint_law():
+    """Speed of the track, mean and others in one curvature, the speed then taken out of it."""
+    rng = np.random.default_rng(2)
+    root = rng.normal(size=(3, 3))
+    across, told, variance = root @ root.T, 1.7, 0.4
+    found = across.copy()
+    own_speed_hides(found, speed_variance=variance, told=told)
+    # Order: the track's own speed, the mean, two others.
+    joint = np.zeros((4, 4))
+    joint[:2, :2] = np.array([[1, -1], [-1, 1]]) / variance
+    joint[0, 0] += told
+    along = joint.copy()
+    joint[np.ix_([0, 2, 3], [0, 2, 3])] += across
+    with_across, alone = (
+        m[1:, 1:] - np.outer(m[0, 1:], m[0, 1:]) / m[0, 0] for m in (joint, along)
+    )
+    assert_allclose(found, with_across - alone, rtol=1e-10, atol=1e-12)
 
 
 def test_scores_of_simulated_tracks_have_the_information_as_their_covariance():
