@@ -17,6 +17,7 @@ BOUND_PARAMETERS = (
     "speed_variance",
     "turning_rate",
     "turning_rate_variance",
+    "sideways_diffusion",
 )
 
 
@@ -71,21 +72,22 @@ def track_information(
     longitudinal_diffusion: float = 0.0,
     speed_spread: float = 0.0,
     turning_rate_spread: float = 0.0,
+    sideways_diffusion: float = 0.0,
     exposure_s: float = 0.0,
 ) -> Floats:
-    """Fisher information of one track, its position and orientation unknown, D_perp = 0.
+    """Fisher information of one track, its position and orientation unknown.
 
     Along and across the path, deviations from it being small, the positions are Gaussian::
 
         along   x0 + v t + sqrt(2 D_par) W            + localization error
-        across  y0 + v (θ0 t + ω t²/2 + sqrt(2 D_r) ∫W dt) + localization error
+        across  y0 + v (θ0 t + ω t²/2 + sqrt(2 D_r) ∫W dt) + sqrt(2 D_perp) W + localization error
 
     averaged over the exposures, with covariances (K1 and K3 of `exposed_wiener` and
     `exposed_integral`, s_v and s_ω the spreads of v and ω between tracks, t the middles of the
     exposures, u the mean of t²/2 over them)::
 
         Σ_along  = σ² + 2 D_par K1 + s_v² t tᵀ
-        Σ_across = σ² + 2 D_r v² K3 + v² s_ω² u uᵀ
+        Σ_across = σ² + 2 D_r v² K3 + 2 D_perp K1 + v² s_ω² u uᵀ
 
     and for parameters a, b of mean μ and covariance Σ, with B the columns of x0 or (y0, θ0)::
 
@@ -101,13 +103,15 @@ def track_information(
         Starts of the exposures, n >= 3.
     speed, rotational_diffusion, localization_error, longitudinal_diffusion : float
         In µm/s, rad²/s, µm, µm²/s.
+    sideways_diffusion : float
+        In µm²/s.
     speed_spread, turning_rate_spread : float
         Between tracks, in µm/s and rad/s.
     exposure_s : float
 
     Returns
     -------
-    (7, 7) array
+    (8, 8) array
         In the order of `BOUND_PARAMETERS`.
 
     References
@@ -129,13 +133,13 @@ def track_information(
     information = _gaussian_information(
         along + speed_spread**2 * drawn,
         unknown=ones[:, None],
-        means=np.stack([middle, *[0 * ones] * 6]),
-        covariances=[none, none, 2 * wiener, unit, drawn, none, none],
+        means=np.stack([middle, *[0 * ones] * 7]),
+        covariances=[none, none, 2 * wiener, unit, drawn, none, none, none],
     )
     across = _gaussian_information(
-        localization_error**2 * unit + speed**2 * turning,
+        localization_error**2 * unit + speed**2 * turning + 2 * sideways_diffusion * wiener,
         unknown=np.stack([ones, middle], axis=1),
-        means=np.stack([*[0 * ones] * 5, speed * curve, 0 * ones]),
+        means=np.stack([*[0 * ones] * 5, speed * curve, *[0 * ones] * 2]),
         covariances=[
             2 * speed * turning,
             2 * speed**2 * integral,
@@ -144,6 +148,7 @@ def track_information(
             none,
             none,
             speed**2 * curved,
+            2 * wiener,
         ],
     )
     told = _gaussian_information(
@@ -196,7 +201,7 @@ def least_standard_errors(
 
     Parameters
     ----------
-    information : (7, 7) array
+    information : (8, 8) array
         Of one track, from `track_information`.
     unknown : sequence of str
         Parameters that are fitted, from `BOUND_PARAMETERS`; the others are known.
