@@ -188,6 +188,44 @@ class Outcome:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ChamberOutcome:
+    """One simulated chamber by quantity; relative numbers, NaN where there is none."""
+
+    day: str
+    tracks: int  # gliding and kept
+    truth: dict[str, float]  # the chamber's true value over that of the condition, less 1
+    off: dict[str, float]  # the estimate over the chamber's true value, less 1
+    bound: dict[str, float]  # least standard error that these very tracks allow
+    present: float  # that of a mean speed over the filaments present at a moment
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class AgainstBound:
+    """Scatter of one quantity beside the least that its tracks allow; relative numbers.
+
+    Within chambers an estimate is compared with the true value of its chamber. For the whole
+    design the least is the scatter of the mean of day means of true chamber values, the same in
+    the same experiments, with the bound of each chamber added.
+    """
+
+    chambers: int  # simulated ones with a value, of all experiments
+    tracks: float  # gliding and kept, mean of a chamber
+    bias: float  # of chambers, about the truth of each
+    bias_error: float
+    rmse: float
+    bound: float  # root mean square
+    ratio: float  # rmse / bound
+    ratio_error: float  # of Monte Carlo, like the other errors
+    of_present: float  # rmse / least error of a mean over filaments present; NaN but for the speed
+    of_present_error: float
+    chambers_alone: float  # what true chamber values bring to the RMSE of the whole design
+    tracks_alone: float  # what the bound adds to it
+    best: float  # both together
+    of_best: float  # RMSE of the whole design / best
+    of_best_error: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RehearsedQuantity:
     """How one quantity fared; relative numbers are those of the truth."""
 
@@ -205,6 +243,7 @@ class RehearsedQuantity:
     verdict: str
     half_width: float  # median
     shown: tuple[Outcome, ...]  # of the first experiments
+    against_bound: AgainstBound | None = None  # None where there is no bound
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -130,3 +130,22 @@ class Combined:
     covers: str
     level_error: dict[str, Floats]
     level_units: dict[str, int]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TrackDiffusion:
+    """Rotational diffusion of each kept track of a recording, (k,) arrays.
+
+    Parameters
+    ----------
+    value, low, high : arrays
+        Median and 68 % interval of the posterior, in rad²/s; NaN where there is a ``problem``,
+        but for the high end of a track that cannot be told from a straight one.
+    problem : array of str
+        Why there is no value.
+    """
+
+    value: Floats
+    low: Floats
+    high: Floats
+    problem: NDArray[np.object_]

@@ -95,6 +95,12 @@ class TrackResult:
     path_um: float
     speed_um_s: float  # NaN if the track is too short to tell
     speed_error_um_s: float = NAN  # standard error of the track's own speed
+    # What the track alone says, under a weak prior: median, and a 68 % interval, one standard
+    # error on the log scale; a low end of NaN beside a high one is open.
+    rotational_diffusion_rad2_s: float = NAN
+    rotational_diffusion_low_rad2_s: float = NAN
+    rotational_diffusion_high_rad2_s: float = NAN
+    rotational_diffusion_problem: str = ""  # why a kept track has none
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -17,6 +17,7 @@ BOUND_PARAMETERS = (
     "speed_variance",
     "turning_rate",
     "turning_rate_variance",
+    "sideways_diffusion",
 )
 
 
@@ -71,29 +72,30 @@ def track_information(
     longitudinal_diffusion: float = 0.0,
     speed_spread: float = 0.0,
     turning_rate_spread: float = 0.0,
+    sideways_diffusion: float = 0.0,
     exposure_s: float = 0.0,
 ) -> Floats:
-    """Fisher information of one track, its position and orientation unknown, D_perp = 0.
+    """Fisher information of one track, its position and orientation unknown.
 
     Along and across the path, deviations from it being small, the positions are Gaussian::
 
         along   x0 + v t + sqrt(2 D_par) W            + localization error
-        across  y0 + v (θ0 t + ω t²/2 + sqrt(2 D_r) ∫W dt) + localization error
+        across  y0 + v (θ0 t + ω t²/2 + sqrt(2 D_r) ∫W dt) + sqrt(2 D_perp) W + localization error
 
     averaged over the exposures, with covariances (K1 and K3 of `exposed_wiener` and
     `exposed_integral`, s_v and s_ω the spreads of v and ω between tracks, t the middles of the
     exposures, u the mean of t²/2 over them)::
 
         Σ_along  = σ² + 2 D_par K1 + s_v² t tᵀ
-        Σ_across = σ² + 2 D_r v² K3 + v² s_ω² u uᵀ
+        Σ_across = σ² + 2 D_r v² K3 + 2 D_perp K1 + v² s_ω² u uᵀ
 
     and for parameters a, b of mean μ and covariance Σ, with B the columns of x0 or (y0, θ0)::
 
         I_ab = ∂aμᵀ P ∂bμ + tr(P ∂aΣ P ∂bΣ) / 2,   P = Σ⁻¹ - Σ⁻¹ B (Bᵀ Σ⁻¹ B)⁻¹ Bᵀ Σ⁻¹
 
     the information of what does not change when the track is moved or rotated. A turning rate
-    bends a path without telling its speed, so ∂μ_across/∂v = 0. Across, all tracks have the mean
-    speed: where speeds differ, D_r can be known a little better than this says.
+    bends a path without telling its speed, so ∂μ_across/∂v = 0. Across, the speed is the track's
+    own, of which the positions along have told ``1/w² = 1/s_v² + q`` (`own_speed_hides`).
 
     Parameters
     ----------
@@ -101,13 +103,15 @@ def track_information(
         Starts of the exposures, n >= 3.
     speed, rotational_diffusion, localization_error, longitudinal_diffusion : float
         In µm/s, rad²/s, µm, µm²/s.
+    sideways_diffusion : float
+        In µm²/s.
     speed_spread, turning_rate_spread : float
         Between tracks, in µm/s and rad/s.
     exposure_s : float
 
     Returns
     -------
-    (7, 7) array
+    (8, 8) array
         In the order of `BOUND_PARAMETERS`.
 
     References
@@ -129,13 +133,13 @@ def track_information(
     information = _gaussian_information(
         along + speed_spread**2 * drawn,
         unknown=ones[:, None],
-        means=np.stack([middle, *[0 * ones] * 6]),
-        covariances=[none, none, 2 * wiener, unit, drawn, none, none],
+        means=np.stack([middle, *[0 * ones] * 7]),
+        covariances=[none, none, 2 * wiener, unit, drawn, none, none, none],
     )
-    information += _gaussian_information(
-        localization_error**2 * unit + speed**2 * turning,
+    across = _gaussian_information(
+        localization_error**2 * unit + speed**2 * turning + 2 * sideways_diffusion * wiener,
         unknown=np.stack([ones, middle], axis=1),
-        means=np.stack([*[0 * ones] * 5, speed * curve, 0 * ones]),
+        means=np.stack([*[0 * ones] * 5, speed * curve, *[0 * ones] * 2]),
         covariances=[
             2 * speed * turning,
             2 * speed**2 * integral,
@@ -144,9 +148,38 @@ def track_information(
             none,
             none,
             speed**2 * curved,
+            2 * wiener,
         ],
     )
-    return information
+    told = _gaussian_information(
+        along, unknown=ones[:, None], means=middle[None, :], covariances=[none]
+    )
+    own_speed_hides(across, speed_variance=speed_spread**2, told=float(told[0, 0]))
+    return information + across
+
+
+def own_speed_hides(across: Floats, *, speed_variance: float, told: float) -> None:
+    """Take from the information across what a speed of the track's own hides, in place.
+
+    With J across for the track's own speed, its variance w² given the positions along, and
+    r = 1 / (1 + s_v² q), by which the mean speed moves what is expected of it::
+
+        I_θθ = J_θθ - c w² J_vθ J_vθᵀ,  I_vθ = r c J_vθ,  I_vv = r² c J_vv,  c = 1 / (1 + w² J_vv)
+
+    Parameters
+    ----------
+    across : (p, p) array
+        J, the speed first.
+    speed_variance, told : float
+        s_v², and q, the information that the positions along have of the track's speed.
+    """
+    moved = 1 / (1 + speed_variance * told)
+    variance = speed_variance * moved
+    kept = 1 / (1 + variance * across[0, 0])
+    with_speed = across[0].copy()
+    across -= kept * variance * np.outer(with_speed, with_speed)
+    across[0] = across[:, 0] = moved * kept * with_speed
+    across[0, 0] = moved**2 * kept * with_speed[0]
 
 
 def _gaussian_information(
@@ -168,7 +201,7 @@ def least_standard_errors(
 
     Parameters
     ----------
-    information : (7, 7) array
+    information : (8, 8) array
         Of one track, from `track_information`.
     unknown : sequence of str
         Parameters that are fitted, from `BOUND_PARAMETERS`; the others are known.

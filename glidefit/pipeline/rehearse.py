@@ -13,20 +13,29 @@ import numpy as np
 import glidefit
 from glidefit.designs import (
     REHEARSAL_FORMAT,
+    ChamberOutcome,
     Components,
+    ConditionRehearsal,
     FilmedDesign,
     Outcome,
     Rehearsal,
 )
 from glidefit.errors import GlidefitError, InputError
 from glidefit.pipeline.finished import chosen_condition, results_file, used_settings
-from glidefit.pipeline.simulated import experiment
+from glidefit.pipeline.simulated import Analysed, analysed
 from glidefit.results import ConditionResult, StudyResult
 from glidefit.running import folder as run_folder
 from glidefit.running.progress import progress
 from glidefit.running.workers import run_all
 from glidefit.settings import Settings
-from glidefit.steps.rehearse import REHEARSED, filmed_design, has_components, judge
+from glidefit.steps.rehearse import (
+    REHEARSED,
+    SimulatedChamber,
+    chamber_outcomes,
+    filmed_design,
+    has_components,
+    judge,
+)
 from glidefit.steps.simulate import Scenario, ScenarioCondition, Spread
 
 FILES = ("rehearsal.json", "rehearsal.html")
@@ -36,10 +45,19 @@ FILES = ("rehearsal.json", "rehearsal.html")
 class _Experiment:
     """One simulated experiment of one condition: what a worker is given."""
 
+    design: FilmedDesign
     scenario: Scenario
     settings: Settings
     seed: int
     number: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Found:
+    """What a worker gives back."""
+
+    outcomes: dict[str, Outcome]
+    chambers: tuple[ChamberOutcome, ...]
 
 
 def rehearse(
@@ -81,11 +99,13 @@ def rehearse(
     settings = used_settings(study, str(source))
     designs = [_design(study, c, settings) for c in _chosen(study, conditions, str(source))]
     tasks = [
-        _Experiment(scenario=_scenario(design), settings=settings, seed=seed, number=i)
+        _Experiment(
+            design=design, scenario=_scenario(design), settings=settings, seed=seed, number=i
+        )
         for design in designs
         for i in range(experiments)
     ]
-    outcomes = _simulated(tasks, workers=workers)
+    found = _simulated(tasks, workers=workers)
     level = settings.interval.level
     rehearsal = Rehearsal(
         study=study.name,
@@ -94,12 +114,21 @@ def rehearse(
         experiments=experiments,
         level=level,
         conditions=tuple(
-            judge(design, outcomes[k * experiments : (k + 1) * experiments], level=level)
+            _judged(design, found[k * experiments : (k + 1) * experiments], level)
             for k, design in enumerate(designs)
         ),
     )
     _write(out, rehearsal, study)
     return rehearsal
+
+
+def _judged(design: FilmedDesign, found: Sequence[_Found], level: float) -> ConditionRehearsal:
+    return judge(
+        design,
+        [one.outcomes for one in found],
+        level=level,
+        chambers=[one.chambers for one in found],
+    )
 
 
 def _chosen(study: StudyResult, names: Sequence[str], where: str) -> list[ConditionResult]:
@@ -173,7 +202,7 @@ def _spread(parts: Components | None, *, filament: float = 0.0, times: float = 1
     return Spread(day=sd(parts.day), chamber=sd(parts.chamber), filament=filament)
 
 
-def _simulated(tasks: Sequence[_Experiment], *, workers: int) -> list[dict[str, Outcome]]:
+def _simulated(tasks: Sequence[_Experiment], *, workers: int) -> list[_Found]:
     with progress(len(tasks), "experiments") as done:
         results = run_all(
             _one,
@@ -182,7 +211,7 @@ def _simulated(tasks: Sequence[_Experiment], *, workers: int) -> list[dict[str, 
             name=lambda task: f"{task.scenario.name}, {task.number + 1}",
             done=done,
         )
-    found = []
+    found: list[_Found] = []
     for result in results:
         if isinstance(result, GlidefitError):
             raise result
@@ -190,22 +219,49 @@ def _simulated(tasks: Sequence[_Experiment], *, workers: int) -> list[dict[str, 
     return found
 
 
-def _one(task: _Experiment) -> dict[str, Outcome]:
+def _one(task: _Experiment) -> _Found:
     """Simulate and analyse one experiment, with a random stream of its own."""
     name = task.scenario.name
     rng = np.random.default_rng([task.seed, zlib.crc32(name.encode(errors="replace")), task.number])
-    found = experiment(task.scenario, settings=task.settings, rng=rng)
-    if name not in found:
-        return dict.fromkeys(REHEARSED, Outcome(value=math.nan, low=math.nan, high=math.nan))
-    estimates = found[name].estimates
-    return {
+    made = analysed(task.scenario, settings=task.settings, rng=rng)
+    if name not in made.numbers:
+        nothing = Outcome(value=math.nan, low=math.nan, high=math.nan)
+        return _Found(outcomes=dict.fromkeys(REHEARSED, nothing), chambers=())
+    numbers = made.numbers[name]
+    outcomes = {
         key: Outcome(
-            value=_short(estimates[key].value),
-            low=_short(estimates[key].low),
-            high=_short(estimates[key].high),
+            value=_short(numbers.estimates[key].value),
+            low=_short(numbers.estimates[key].low),
+            high=_short(numbers.estimates[key].high),
         )
         for key in REHEARSED
     }
+    fitted = numbers.fitted
+    return _Found(
+        outcomes=outcomes,
+        chambers=chamber_outcomes(task.design, _chambers(made), fitted.chambers, fitted.columns),
+    )
+
+
+def _chambers(made: Analysed) -> list[SimulatedChamber]:
+    """The truth of every chamber, and how long its gliding tracks are that were kept."""
+    lengths: dict[tuple[str, str], list[np.ndarray]] = {}
+    truths = {}
+    for simulated, recording in zip(made.assay.recordings, made.recordings, strict=True):
+        gliding = recording.clean.kept & (simulated.truth.kind == "gliding")
+        place = simulated.day, simulated.chamber
+        lengths.setdefault(place, []).append(recording.clean.tracks.n_positions[gliding])
+        truths[place] = simulated.chamber_truth
+    return [
+        SimulatedChamber(
+            day=day,
+            chamber=chamber,
+            speed_um_s=truths[day, chamber].speed_um_s,
+            rotational_diffusion_rad2_s=truths[day, chamber].rotational_diffusion_rad2_s,
+            n_positions=np.concatenate(parts),
+        )
+        for (day, chamber), parts in lengths.items()
+    ]
 
 
 def _short(value: float) -> float:

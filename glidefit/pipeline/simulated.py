@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from glidefit.evidence import CleanRecording
 from glidefit.pipeline.study import ConditionNumbers, condition_numbers
 from glidefit.settings import Settings
 from glidefit.steps.clean import clean
-from glidefit.steps.simulate import Scenario, SimulatedRecording, simulate_assay
+from glidefit.steps.simulate import Scenario, SimulatedAssay, SimulatedRecording, simulate_assay
 
 
 def cleaned(
@@ -34,18 +36,42 @@ def cleaned(
     )
 
 
-def experiment(
-    scenario: Scenario, *, settings: Settings, rng: np.random.Generator
-) -> dict[str, ConditionNumbers]:
-    """Simulate one assay and analyse it; by condition, without those that keep no track."""
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Analysed:
+    """A simulated assay and what the analysis made of it.
+
+    Parameters
+    ----------
+    assay : SimulatedAssay
+    recordings : tuple of CleanRecording
+        In the order of the assay.
+    numbers : dict of str: ConditionNumbers
+        By condition, without those that keep no track.
+    """
+
+    assay: SimulatedAssay
+    recordings: tuple[CleanRecording, ...]
+    numbers: dict[str, ConditionNumbers]
+
+
+def analysed(scenario: Scenario, *, settings: Settings, rng: np.random.Generator) -> Analysed:
+    """Simulate one assay and analyse it."""
     assay = simulate_assay(scenario, rng)
-    recordings = [cleaned(r, scenario, settings=settings) for r in assay.recordings]
+    recordings = tuple(cleaned(r, scenario, settings=settings) for r in assay.recordings)
     by_condition = {
         condition.name: [r for r in recordings if r.condition == condition.name]
         for condition in scenario.conditions
     }
-    return {
+    numbers = {
         name: condition_numbers(own, settings=settings, rng=rng)
         for name, own in by_condition.items()
         if any(r.clean.kept.any() for r in own)
     }
+    return Analysed(assay=assay, recordings=recordings, numbers=numbers)
+
+
+def experiment(
+    scenario: Scenario, *, settings: Settings, rng: np.random.Generator
+) -> dict[str, ConditionNumbers]:
+    """Simulate one assay and analyse it; by condition, without those that keep no track."""
+    return analysed(scenario, settings=settings, rng=rng).numbers

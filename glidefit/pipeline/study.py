@@ -148,7 +148,7 @@ def _condition(
     sourced: SourcedSettings,
     seed: int,
 ) -> ConditionResult:
-    from glidefit.steps import ageing, motility, summarise, uncertainty
+    from glidefit.steps import ageing, fit, motility, summarise, uncertainty
 
     settings = sourced.values
     level = settings.interval.level
@@ -220,7 +220,9 @@ def _condition(
         msd=msd,
         heading_correlation=heading,
         chambers=summarise.chambers(recordings, by_chamber),
-        tracks=summarise.tracks(recordings, fitted.track_speeds),
+        tracks=summarise.tracks(
+            recordings, fitted.track_speeds, fit.track_diffusions(recordings, fitted)
+        ),
         drawn=drawn,
         time_points=points,
         spread=(

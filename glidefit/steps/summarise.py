@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from glidefit.evidence import REASONS, SHORT, CleanRecording, Combined
+from glidefit.evidence import REASONS, SHORT, CleanRecording, Combined, TrackDiffusion
 from glidefit.quantities import QUANTITIES
 from glidefit.results import (
     NAN,
@@ -124,7 +124,9 @@ def chambers(
 
 
 def tracks(
-    recordings: Sequence[CleanRecording], speeds: Mapping[str, tuple[Floats, Floats]]
+    recordings: Sequence[CleanRecording],
+    speeds: Mapping[str, tuple[Floats, Floats]],
+    diffusions: Mapping[str, TrackDiffusion],
 ) -> tuple[TrackResult, ...]:
     """What every track says of itself, set-aside ones too."""
     out = []
@@ -136,6 +138,10 @@ def tracks(
         speed, error = np.full(t.n_tracks, np.nan), np.full(t.n_tracks, np.nan)
         if r.recording in speeds:
             speed[kept], error[kept] = speeds[r.recording]
+        own = diffusions.get(r.recording)
+        turning, problem = np.full((3, t.n_tracks), np.nan), np.full(t.n_tracks, "", dtype=object)
+        if own is not None:
+            turning[:, kept], problem[kept] = (own.value, own.low, own.high), own.problem
         out += [
             TrackResult(
                 recording=r.recording,
@@ -150,6 +156,10 @@ def tracks(
                 path_um=_short(speed[k] * duration[k]),
                 speed_um_s=_short(speed[k]),
                 speed_error_um_s=_short(error[k]),
+                rotational_diffusion_rad2_s=_short(turning[0, k]),
+                rotational_diffusion_low_rad2_s=_short(turning[1, k]),
+                rotational_diffusion_high_rad2_s=_short(turning[2, k]),
+                rotational_diffusion_problem=str(problem[k]),
             )
             for k in range(t.n_tracks)
         ]
@@ -448,7 +458,7 @@ def condition_result(
         msd=(),
         heading_correlation=(),
         chambers=chambers(recordings, {}),
-        tracks=tracks(recordings, {}),
+        tracks=tracks(recordings, {}, {}),
         drawn=drawn_tracks,
         time_points=(),
         spread=(),

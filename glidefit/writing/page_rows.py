@@ -16,6 +16,7 @@ from glidefit.results import (
     ModelCheck,
     RecordingResult,
     SettingRow,
+    TrackResult,
 )
 from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
 from glidefit.writing.wording import counted, joined, named, sentence, visible
@@ -251,6 +252,30 @@ def comparison_rows(comparisons: Iterable[Comparison]) -> tuple[ComparisonRow, .
         )
         for c in comparisons
     )
+
+
+def own_values(tracks: Iterable[TrackResult]) -> str:
+    """What the table of tracks says of each, and how well; "" where no track has its own D_r."""
+    kept = [t for t in tracks if t.kept]
+    known = [t for t in kept if math.isfinite(t.rotational_diffusion_rad2_s)]
+    if not known:
+        return ""
+    factors = sorted(
+        (t.rotational_diffusion_high_rad2_s / t.rotational_diffusion_low_rad2_s) ** 0.5
+        for t in known
+    )
+    errors = sorted(t.speed_error_um_s / t.speed_um_s for t in kept if t.speed_error_um_s > 0)
+    text = (
+        "tables/per_track.csv has what each track alone says: its speed with a standard error"
+        f"{f' (± {percent(errors[len(errors) // 2])} in the median)' if errors else ''}, and its "
+        "rotational diffusion as median and 68 % interval, one standard error on the log scale "
+        f"(a factor of {significant(factors[len(factors) // 2], digits=2)} either way in the "
+        "median). That of a single track is vague, so it is the posterior under a weak prior: "
+        "log D_r is normal about the value of the chamber, a factor of 10 being one standard "
+        "deviation."
+    )
+    without = len(kept) - len(known)
+    return f"{text} {counted(without, 'kept track')} cannot tell it." if without else text
 
 
 def summary(condition: ConditionResult) -> str:

@@ -53,6 +53,7 @@ def condition_page(study: StudyResult, condition: ConditionResult) -> str:
         checks=page_rows.check_rows(condition.model_checks),
         spread=page_rows.spread_tables(condition.spread),
         recordings=rows,
+        own=page_rows.own_values(condition.tracks),
         troubled=sum(bool(row.problems) for row in rows),
         calibration=page_rows.shared_calibration(rows),
         chosen=[row for row in study.settings if row.source != "default"],

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from glidefit.designs import (
+    AgainstBound,
     Components,
     ConditionRehearsal,
     FilmedDesign,
@@ -37,6 +39,20 @@ class QuantityRow:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class BoundRow:
+    """One quantity beside the Cramér-Rao bound: in one chamber, and of the whole design."""
+
+    label: str
+    bias: str
+    rmse: str
+    bound: str
+    ratio: str
+    whole: str
+    best: str
+    of_best: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class LevelRow:
     """What one level brings to the uncertainty."""
 
@@ -54,6 +70,9 @@ class ConditionPart:
     said: tuple[str, ...]
     design: str
     rows: tuple[QuantityRow, ...]
+    bounds: tuple[BoundRow, ...]
+    compared: str  # how many chambers and tracks stand behind them
+    present: str  # speed against the mean over the filaments present
     notes: tuple[str, ...]
     shown: int
     figures: tuple[Drawing, ...]
@@ -84,12 +103,25 @@ def _part(one: ConditionRehearsal, rehearsal: Rehearsal, *, number: int) -> Cond
         intervals_against_truth(q, key=f"rehearsed-{number}-{q.quantity.replace('_', '-')}")
         for q in one.quantities
     ]
+    bounds = [q.against_bound for q in one.quantities if q.against_bound is not None]
     notes = [*one.design.notes, *(note for c in one.design.components for note in c.notes)]
     return ConditionPart(
         name=named(one.design.condition),
         said=one.said,
         design=_design(one.design),
         rows=tuple(_row(q, rehearsal) for q in one.quantities),
+        bounds=tuple(
+            _bound_row(q, q.against_bound) for q in one.quantities if q.against_bound is not None
+        ),
+        compared=_compared(bounds),
+        present=next(
+            (
+                _times(b.of_present, b.of_present_error)
+                for b in bounds
+                if math.isfinite(b.of_present)
+            ),
+            "",
+        ),
         notes=tuple(dict.fromkeys(notes)),
         shown=max((len(q.shown) for q in one.quantities), default=0),
         figures=tuple(figure for figure in figures if figure is not None),
@@ -136,6 +168,37 @@ def _row(q: RehearsedQuantity, rehearsal: Rehearsal) -> QuantityRow:
         alert=q.verdict == "too low",
         half_width="open" if q.with_interval and math.isnan(q.half_width) else _share(q.half_width),
     )
+
+
+def _bound_row(q: RehearsedQuantity, b: AgainstBound) -> BoundRow:
+    return BoundRow(
+        label=QUANTITIES[q.quantity].label,
+        bias=_signed(b.bias, b.bias_error),
+        rmse=_fine(b.rmse),
+        bound=_fine(b.bound),
+        ratio=_times(b.ratio, b.ratio_error),
+        whole=_fine(q.rmse),
+        best=_fine(b.best),
+        of_best=_times(b.of_best, b.of_best_error),
+    )
+
+
+def _compared(bounds: Sequence[AgainstBound]) -> str:
+    if not bounds:
+        return ""
+    most = max(bounds, key=lambda b: b.chambers)
+    return (
+        f"{counted(most.chambers, 'simulated chamber')} of "
+        f"{significant(most.tracks, digits=2)} gliding tracks on average"
+    )
+
+
+def _fine(share: float) -> str:
+    return NONE if math.isnan(share) else f"{100 * share:.2g} %"
+
+
+def _times(value: float, error: float) -> str:
+    return NONE if math.isnan(value) else f"{value:.2f} ± {error:.2f}"
 
 
 def _signed(value: float, error: float) -> str:

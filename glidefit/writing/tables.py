@@ -27,6 +27,14 @@ _DIGITS = 9  # far below any interval, and 0.1 + 0.2 reads 0.3
 _PLACES_UM = 6  # 1 pm
 _PLACES_S = 9
 _TRACK = ("recording", "day", "chamber", "track")
+_OWN = (
+    "speed_um_s",
+    "speed_error_um_s",
+    "rotational_diffusion_rad2_s",
+    "rotational_diffusion_low_rad2_s",
+    "rotational_diffusion_high_rad2_s",
+    "rotational_diffusion_problem",
+)
 _LENGTHS = ("n_positions", "duration_s", "net_advance_um", "path_um")
 
 
@@ -57,7 +65,7 @@ def estimates_table(study: StudyResult) -> str:
 
 def per_track_table(study: StudyResult) -> str:
     """One row a track, kept and set aside."""
-    names = (*_TRACK, "kept", "set_aside_reason", *_LENGTHS, "speed_um_s")
+    names = (*_TRACK, "kept", "set_aside_reason", *_LENGTHS, *_OWN)
     rows = [[c.condition, *_columns(t, names)] for c in study.conditions for t in c.tracks]
     return table_text(["condition", *names], rows)
 

@@ -10,6 +10,7 @@ from glidefit.kernels.bound import (
     exposed_wiener,
     least_relative_error_of_ratio,
     least_standard_errors,
+    own_speed_hides,
     track_information,
 )
 
@@ -66,28 +67,66 @@ def test_mean_speed_is_known_no_better_than_its_spread_between_tracks_allows():
     assert known["speed"] < 0.12
 
 
+def test_rotational_diffusion_is_known_although_speeds_differ():
+    """Each track knows its own speed: 40 tracks of speeds 30 % apart know D_r as alike ones do."""
+    unknown = ["speed", "rotational_diffusion", "localization_variance"]
+    time = np.arange(100) * 0.5
+    alike, apart = (
+        least_standard_errors(
+            track_information(time, speed_spread=spread, **MOTION), unknown=unknown, n_tracks=40
+        )
+        for spread in (0.0, 0.24)
+    )
+    assert_allclose(apart["speed"], 0.24 / 40**0.5, rtol=0.02)
+    ratio = apart["rotational_diffusion"] / alike["rotational_diffusion"]
+    assert 1 < ratio < 1.01
+
+
+def test_bound_across_where_speeds_differ_is_that_of_the_joint_law():
+    """Speed of the track, mean and others in one curvature, the speed then taken out of it."""
+    rng = np.random.default_rng(2)
+    root = rng.normal(size=(3, 3))
+    across, told, variance = root @ root.T, 1.7, 0.4
+    found = across.copy()
+    own_speed_hides(found, speed_variance=variance, told=told)
+    # Order: the track's own speed, the mean, two others.
+    joint = np.zeros((4, 4))
+    joint[:2, :2] = np.array([[1, -1], [-1, 1]]) / variance
+    joint[0, 0] += told
+    along = joint.copy()
+    joint[np.ix_([0, 2, 3], [0, 2, 3])] += across
+    with_across, alone = (
+        m[1:, 1:] - np.outer(m[0, 1:], m[0, 1:]) / m[0, 0] for m in (joint, along)
+    )
+    assert_allclose(found, with_across - alone, rtol=1e-10, atol=1e-12)
+
+
 def test_scores_of_simulated_tracks_have_the_information_as_their_covariance():
     # An independent second version: positions drawn step by step, log likelihood of contrasts
     # free of place and orientation, slopes by differences.
     rng = np.random.default_rng(1)
     time, exposure, n, fine = np.arange(8) * 0.5, 0.25, 40_000, 20
-    truth = np.array([0.8, 0.02, 0.003, 0.03**2])
+    truth = np.array([0.8, 0.02, 0.003, 0.03**2, 0.001])
     along, across = _small_angle_tracks(truth, time, exposure, n, fine, rng)
 
     def log_likelihood(values):
-        v, turning, diffusion, variance = values
+        v, turning, diffusion, variance, sideways = values
         middle = time + exposure / 2
         x = 2 * diffusion * exposed_wiener(time, exposure) + variance * np.eye(len(time))
         y = 2 * turning * v**2 * exposed_integral(time, exposure) + variance * np.eye(len(time))
+        y += 2 * sideways * exposed_wiener(time, exposure)
         return _of_contrasts(along - v * middle, x, 1) + _of_contrasts(across, y, 2)
 
     scores = []
-    for i in range(4):
-        step = np.zeros(4)
+    for i in range(5):
+        step = np.zeros(5)
         step[i] = 1e-3 * truth[i]
         scores.append((log_likelihood(truth + step) - log_likelihood(truth - step)) / step[i] / 2)
     scores = np.stack(scores, axis=1) * truth
-    information = track_information(time, exposure_s=exposure, **MOTION)[:4, :4]
+    rows = [*range(4), row("sideways_diffusion")]
+    information = track_information(
+        time, exposure_s=exposure, sideways_diffusion=truth[4], **MOTION
+    )[np.ix_(rows, rows)]
     expected = information * np.outer(truth, truth)
     size = np.sqrt(np.diag(expected))
     # Products of scores of 40 000 tracks scatter by about 1 % of the diagonal; the walk's own
@@ -98,12 +137,13 @@ def test_scores_of_simulated_tracks_have_the_information_as_their_covariance():
 
 
 def _small_angle_tracks(truth, time, exposure, n, fine, rng):
-    v, turning, diffusion, variance = truth
+    v, turning, diffusion, variance, sideways = truth
     per_frame = 2 * fine  # frames of 0.5 s, exposed during their first half
     step = 0.5 / per_frame
     count = per_frame * len(time)
     heading = np.cumsum(rng.normal(0, np.sqrt(2 * turning * step), (n, count)), axis=1)
-    y = np.cumsum(v * heading * step, axis=1)
+    aside = rng.normal(0, np.sqrt(2 * sideways * step), (n, count))
+    y = np.cumsum(v * heading * step + aside, axis=1)
     x = np.cumsum(v * step + rng.normal(0, np.sqrt(2 * diffusion * step), (n, count)), axis=1)
     seen = np.arange(len(time))[:, None] * per_frame + np.arange(fine)
     noise = rng.normal(0, np.sqrt(variance), (2, n, len(time)))

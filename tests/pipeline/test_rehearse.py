@@ -57,6 +57,26 @@ def test_scatter_is_that_of_the_components(once):
         assert stats.chi2.ppf(1e-4, 8) / 1.5 < ratio < 1.5 * stats.chi2.ppf(1 - 1e-4, 8)
 
 
+def test_chambers_scatter_as_the_bound_of_their_tracks_says(once):
+    """48 chambers about their own truth: χ², widened for what the bound leaves out (edges)."""
+    [condition] = once[0].conditions
+    *bounded, motile = condition.quantities
+    assert motile.against_bound is None
+    for q in bounded:
+        b = q.against_bound
+        assert b.chambers == 48
+        assert 5 < b.tracks < 60
+        # The speed is a mean over the filaments present, and has a least error of its own.
+        ratio = b.of_present if q.quantity == "speed_um_s" else b.ratio
+        square = 48 * ratio**2
+        assert stats.chi2.ppf(1e-4, 48) / 1.3 < square < 1.3 * stats.chi2.ppf(1 - 1e-4, 48)
+        assert abs(b.bias) < 5 * b.bias_error
+        # Most of the error is that of the true values, which both share.
+        assert b.tracks_alone < b.chambers_alone
+        assert 0.5 < b.of_best < 1.5
+    assert "times the Cramér-Rao bound" in condition.said[-2]
+
+
 def test_files_of_a_rehearsal(once):
     made, out = once
     assert sorted(p.name for p in out.iterdir()) == ["rehearsal.html", "rehearsal.json"]

@@ -88,6 +88,20 @@ def test_chambers_are_those_of_the_sheet_with_their_kept_tracks(result):
     )
 
 
+def test_kept_tracks_have_a_rotational_diffusion_of_their_own_or_a_reason(result):
+    """Those set aside have their own reason. An open interval has its high end alone."""
+    kept = [t for t in result.tracks if t.kept]
+    told = [t for t in kept if not t.rotational_diffusion_problem]
+    assert len(told) > 0.7 * len(kept)
+    for t in told:
+        ends = t.rotational_diffusion_low_rad2_s, t.rotational_diffusion_high_rad2_s
+        assert 0 < ends[0] < t.rotational_diffusion_rad2_s < ends[1]
+    for t in result.tracks:
+        if not t.kept or t.rotational_diffusion_problem:
+            assert np.isnan(t.rotational_diffusion_rad2_s)
+        assert t.kept or not t.rotational_diffusion_problem
+
+
 def test_same_numbers_whatever_the_order_of_recordings(result):
     again = analysed(recordings()[::-1])
     for key, estimate in result.estimates.items():

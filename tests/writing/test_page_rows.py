@@ -131,3 +131,24 @@ def test_comparison_is_rounded_by_its_interval(compare):
     row = page_rows.comparison_rows([compare("a", "b")])[0]
     assert (str(row.ratio), row.level) == ("1.12 (1.03 to 1.22)", "95 %")
     assert (row.p_value, row.p_adjusted, row.p_permutation) == ("0.013", "0.026", "–")
+
+
+def test_own_values_of_tracks_say_how_well_a_track_knows_them(study):
+    tracks = study.conditions[0].tracks
+    assert page_rows.own_values(tracks) == ""
+    kept = [t for t in tracks if t.kept]
+    own = [
+        dataclasses.replace(
+            t,
+            speed_error_um_s=0.02 * t.speed_um_s,
+            rotational_diffusion_rad2_s=0.02,
+            rotational_diffusion_low_rad2_s=0.015,
+            rotational_diffusion_high_rad2_s=0.015 * 1.3**2,
+        )
+        for t in kept[1:]
+    ]
+    text = page_rows.own_values([*own, *(t for t in tracks if not t.kept)])
+    assert "standard error (± 2.0 % in the median)" in text
+    assert "(a factor of 1.3 either way in the median)" in text
+    assert "cannot tell" not in text
+    assert page_rows.own_values([*own, kept[0]]).endswith(" 1 kept track cannot tell it.")

@@ -11,7 +11,7 @@ import xml.etree.ElementTree as ET
 import numpy as np
 import pytest
 
-from glidefit.designs import Goal, Outcome, Plan, Rehearsal
+from glidefit.designs import ChamberOutcome, Goal, Outcome, Plan, Rehearsal
 from glidefit.steps.components import components, interaction
 from glidefit.steps.plan import plan
 from glidefit.steps.rehearse import REHEARSED, filmed_design, has_components, judge
@@ -57,6 +57,22 @@ def make_plan(study, goal=INTERVAL, *, name=None):
     )
 
 
+def simulated_chambers(rng):
+    """Two chambers of one experiment that scatter as the bound says."""
+    keys = REHEARSED[:3]
+    return [
+        ChamberOutcome(
+            day=day,
+            tracks=30,
+            truth=dict(zip(keys, rng.normal(0, 0.05, 3), strict=True)),
+            off=dict(zip(keys, rng.normal(0, 0.02, 3), strict=True)),
+            bound=dict.fromkeys(keys, 0.02),
+            present=0.021,
+        )
+        for day in ("2026-03-02", "2026-03-03")
+    ]
+
+
 def make_rehearsal(study, *, n=40, name=None, intervals=True):
     """Experiments whose intervals hold the truth but for the first."""
     rng = np.random.default_rng(4)
@@ -83,7 +99,9 @@ def make_rehearsal(study, *, n=40, name=None, intervals=True):
                     for (key, t), x in zip(design.truth.items(), off, strict=True)
                 }
             )
-        conditions.append(judge(design, outcomes, level=0.95))
+        own = np.random.default_rng(5)
+        chambers = [simulated_chambers(own) for _ in range(n)] if intervals else ()
+        conditions.append(judge(design, outcomes, level=0.95, chambers=chambers))
     return Rehearsal(
         study=study.name,
         version="0.1.0",
@@ -166,6 +184,20 @@ def test_rehearsal_shows_bias_scatter_and_coverage(pages, finished_study):
     for condition in made.conditions:
         for sentence in condition.said:
             assert sentence in text
+
+
+def test_rehearsal_shows_the_bound_beside_the_scatter(pages, finished_study):
+    made, text = make_rehearsal(finished_study), pages["rehearsal"]
+    for condition in made.conditions:
+        for q in condition.quantities[:3]:
+            b = q.against_bound
+            assert f"{b.ratio:.2f} ± {b.ratio_error:.2f}</span>" in text
+            assert f"{b.of_best:.2f} ± {b.of_best_error:.2f}</span>" in text
+        b = condition.quantities[0].against_bound
+        assert f"is {b.of_present:.2f} ± {b.of_present_error:.2f} times the least error" in text
+    assert text.count("Against the Cramér-Rao bound") == 2
+    assert "From 80 simulated chambers of 30 gliding tracks on average." in text
+    assert "Cramér-Rao" not in pages["no-interval"]
 
 
 def test_figures_of_a_rehearsal_draw_every_interval_and_count_misses(pages):

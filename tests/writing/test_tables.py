@@ -99,6 +99,24 @@ def test_tracks_are_listed_once_and_set_aside_ones_again(study):
     assert float(tracks[5]["speed_um_s"]) == pytest.approx(first.speed_um_s, rel=1e-8)
 
 
+def test_each_track_has_its_own_values_with_their_errors_or_a_reason(study):
+    condition = study.conditions[0]
+    told, silent = [t for t in condition.tracks if t.kept][:2]
+    told = dataclasses.replace(
+        told,
+        speed_error_um_s=0.01,
+        rotational_diffusion_rad2_s=0.02,
+        rotational_diffusion_low_rad2_s=0.015,
+        rotational_diffusion_high_rad2_s=0.027,
+    )
+    silent = dataclasses.replace(silent, rotational_diffusion_problem="it says nothing")
+    one = dataclasses.replace(condition, tracks=(told, silent))
+    first, second = rows_of(per_track_table(dataclasses.replace(study, conditions=(one,))))
+    columns = ["speed_error_um_s", *(k for k in first if k.startswith("rotational_diffusion"))]
+    assert [first[name] for name in columns] == ["0.01", "0.02", "0.015", "0.027", ""]
+    assert [second[name] for name in columns] == ["", "", "", "", "it says nothing"]
+
+
 def test_comparisons(study, compare):
     one = dataclasses.replace(study, comparisons=(compare("R203A", "wild type"),))
     row = rows_of(comparisons_table(one))[0]

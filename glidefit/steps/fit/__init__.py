@@ -2,5 +2,6 @@
 
 from glidefit.steps.fit.condition import ConditionFit, fit
 from glidefit.steps.fit.evidence_columns import SCALARS, CurveColumns
+from glidefit.steps.fit.track_diffusion import track_diffusions
 
-__all__ = ["SCALARS", "ConditionFit", "CurveColumns", "fit"]
+__all__ = ["SCALARS", "ConditionFit", "CurveColumns", "fit", "track_diffusions"]
