@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from glidefit.kernels.filament_contours import add_points, body_places, contour_points, overlapping
 from glidefit.kernels.filament_optics import FilamentOptics, FilmFaults
 from glidefit.kernels.laid_paths import STEP_UM, Filaments
+from glidefit.kernels.photon_noise import poisson_counts
 from glidefit.kernels.simulation import View
 from glidefit.kernels.stray_light import StrayLight
 from glidefit.kernels.synthetic_frames import OFFSET_COUNTS, blinking, illumination
@@ -115,7 +116,7 @@ def filament_frames(
 def _counted(
     expected: Floats, read_noise: float, most: int, rng: np.random.Generator
 ) -> NDArray[np.uint16]:
-    counts = rng.poisson(expected).astype(np.float32)
+    counts = poisson_counts(expected, rng=rng)
     if read_noise > 0:
         counts += np.float32(read_noise) * rng.standard_normal(counts.shape, dtype=np.float32)
     counts += OFFSET_COUNTS
