@@ -30,7 +30,7 @@ def poisson_counts(expected: Floats, *, rng: np.random.Generator) -> NDArray[np.
     below, guide = _tables()
     flat = expected.ravel()
     bits = rng.integers(0, 2**64, size=flat.size, dtype=np.uint64)
-    counts = _from_tables(flat, bits, below, guide)
+    counts: NDArray[np.float32] = _from_tables(flat, bits, below, guide)
     bright = np.flatnonzero(flat >= _HIGHEST)
     counts[bright] = rng.poisson(flat[bright])
     return counts.reshape(expected.shape)

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from glidefit.kernels.filament_contours import add_points, body_places, contour_points, overlapping
 from glidefit.kernels.filament_optics import FilamentOptics, FilmFaults
+from glidefit.kernels.filament_truth import FilamentTruth
 from glidefit.kernels.laid_paths import STEP_UM, Filaments
 from glidefit.kernels.photon_noise import poisson_counts
 from glidefit.kernels.simulation import View
@@ -26,35 +27,6 @@ Bools = NDArray[np.bool_]
 _PIECE_SD = 0.5  # length of the drawn pieces of a contour, in spreads
 EDGE_SD = 3.0  # a body that comes so near the edge, in spreads, is cut by it
 OVERLAP_SD = 3.0  # and bodies so near each other overlap
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class FilamentTruth:
-    """The n filaments of which a frame shows anything, or would if they had not blinked off."""
-
-    filament: Ints  # (n,)
-    track: Ints  # (n,) a filament that comes back into the field has a new one
-    x_um: Floats  # (n,) midpoint of the contour, like the ends the mean over the exposure
-    y_um: Floats
-    head_x_um: Floats
-    head_y_um: Floats
-    tail_x_um: Floats
-    tail_y_um: Floats
-    length_um: Floats  # of the whole contour
-    heading_rad: Floats  # direction of the contour at its midpoint, towards the head
-    cut: Bools  # by the edge of the field, or so near that nobody could tell
-    stuck: Bools
-    bundled: Bools
-    dark: Bools  # blinked off
-    overlapped: Bools  # crosses or touches another filament that shines
-    contour_offset: Ints  # (n + 1,) rows of the bodies
-    contour_x_um: Floats  # (m,) points tail to head, at half a spread
-    contour_y_um: Floats
-
-    @property
-    def counted(self) -> Bools:
-        """Filaments that must be found: whole, gliding, single, shining."""
-        return ~(self.cut | self.stuck | self.bundled | self.dark)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
