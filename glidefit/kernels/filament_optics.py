@@ -22,14 +22,16 @@ class FilamentOptics:
     background_photons: float = 20.0  # in each pixel
     read_noise: float = 1.6  # SD in counts
     labels_per_um: float = 60.0  # that shine, at random places; 0 is even labelling
+    body_um: float = 0.0  # length of bodies too short to be lines; 0 is filaments
 
     def __post_init__(self) -> None:
         if not (self.psf_um > 0 and self.pixel_um > 0):
             raise ValueError("psf_um and pixel_um must be > 0")
         least = min(self.photons_per_um, self.background_photons, self.read_noise)
-        if min(least, self.labels_per_um) < 0:
+        if min(least, self.labels_per_um, self.body_um) < 0:
             raise ValueError(
-                "photons_per_um, background_photons, read_noise and labels_per_um must be >= 0"
+                "photons_per_um, background_photons, read_noise, labels_per_um and body_um must "
+                "be >= 0"
             )
 
     @classmethod
@@ -42,6 +44,7 @@ class FilamentOptics:
         background_photons: float = 20.0,
         read_noise: float = 1.6,
         labels_per_um: float = 60.0,
+        body_um: float = 0.0,
     ) -> Self:
         """Optics in which a filament along the middle of a row has this `signal_to_noise`.
 
@@ -49,20 +52,25 @@ class FilamentOptics:
         """
         rest = background_photons + read_noise**2
         peak = (ratio**2 + ratio * sqrt(ratio**2 + 4 * rest)) / 2
+        share = _central_share(psf_um, pixel_um)
         return cls(
-            photons_per_um=peak / (pixel_um * _central_share(psf_um, pixel_um)),
+            photons_per_um=peak / (share * (body_um * share or pixel_um)),
             psf_um=psf_um,
             pixel_um=pixel_um,
             background_photons=background_photons,
             read_noise=read_noise,
             labels_per_um=labels_per_um,
+            body_um=body_um,
         )
 
     @property
     def peak_photons(self) -> float:
-        """Photons of the filament in a pixel of the row along whose middle it lies."""
+        """Photons of the filament in a pixel of the row along whose middle it lies.
+
+        Of a short body, in the pixel on which it is centred.
+        """
         share = _central_share(self.psf_um, self.pixel_um)
-        return self.photons_per_um * self.pixel_um * share
+        return self.photons_per_um * share * (self.body_um * share or self.pixel_um)
 
     @property
     def signal_to_noise(self) -> float:

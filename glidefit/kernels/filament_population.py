@@ -47,10 +47,10 @@ class FilamentLaw:
             raise ValueError("stuck_share and bundled_share must be 0 to 1")
 
     def lengths(self, n: int, *, rng: np.random.Generator) -> Floats:
-        """Contour lengths of n filaments in µm, log-normal; none below 0.3 µm."""
+        """Contour lengths of n filaments in µm, log-normal; none below 0.3 µm or the mean."""
         middle = np.log(self.length_um) - self.length_spread**2 / 2
         drawn: Floats = np.exp(middle + self.length_spread * rng.standard_normal(n))
-        return np.maximum(drawn, _SHORTEST_UM)
+        return np.maximum(drawn, min(_SHORTEST_UM, self.length_um))
 
 
 def draw_filaments(
