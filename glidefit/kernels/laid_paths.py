@@ -38,22 +38,16 @@ class Filaments:
 
     @classmethod
     def join(cls, parts: Sequence[Filaments]) -> Filaments:
-        """The filaments of all parts, one after the other; bundles are numbered anew."""
+        """The filaments of all parts, one after the other; bundles keep their numbers."""
         columns = {
             f.name: np.concatenate([getattr(p, f.name) for p in parts])
             for f in fields(cls)
-            if f.name not in ("path_offset", "bundle", "motion")
+            if f.name not in ("path_offset", "motion")
         }
         lengths = np.concatenate([np.diff(part.path_offset) for part in parts])
-        shifts = np.cumsum([0] + [len(part.length_um) for part in parts[:-1]])
-        bundles = [
-            np.where(part.bundle >= 0, part.bundle + shift, -1)
-            for part, shift in zip(parts, shifts, strict=True)
-        ]
         return cls(
             **columns,
             path_offset=np.concatenate([[0], np.cumsum(lengths)]),
-            bundle=np.concatenate(bundles),
             motion=Motion.join([part.motion for part in parts]),
         )
 

@@ -44,6 +44,10 @@ def main() -> None:
     parser.add_argument("--cost", action="store_true", help="processor time and memory")
     chosen = parser.parse_args()
     warnings.simplefilter("ignore")  # the script's own
+    for spots in (False, True):  # compiles
+        small = Case(name="small", side_px=256, n_frames=8, filaments=160, spots=spots)
+        for tracker in (script, glidefit):
+            tracker(Film(small.video).images(), small)
     print(HEADER)
     for case in (*CASES, LONG) if chosen.long else CASES:
         if chosen.only in case.name:

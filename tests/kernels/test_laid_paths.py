@@ -175,5 +175,5 @@ def test_joined_filaments_keep_their_paths_and_bundles():
     two.bundle[:] = [1, -1]
     both = Filaments.join([one, two])
     assert_allclose(places(both, 2)[2:], places(two, 2), atol=1e-12)
-    assert_array_equal(both.bundle, [-1, -1, 3, -1])
+    assert_array_equal(both.bundle, [-1, -1, 1, -1])
     assert len(both.motion.speed) == 4

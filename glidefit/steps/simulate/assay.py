@@ -30,6 +30,7 @@ class SimulatedRecording:
     tracks: Tracks
     truth: SimulatedTracks  # the same tracks in the same order
     motile_fraction: float  # expected
+    expected_in_field: dict[str, float]  # filaments of each kind, at a moment
     chamber_truth: LevelTruth
     day_truth: LevelTruth  # of the condition on that day
 
@@ -163,6 +164,7 @@ def _simulate_chamber(
                 tracks=tracks_seen(truth),
                 truth=truth,
                 motile_fraction=expected["gliding"] / total if total > 0 else float("nan"),
+                expected_in_field=expected,
                 chamber_truth=chamber_truth,
                 day_truth=day_truth,
             )

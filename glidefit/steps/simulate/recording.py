@@ -21,7 +21,7 @@ from glidefit.tracks import Tracks
 
 Floats = NDArray[np.float64]
 
-_LARGEST_EFFECT = 1.8
+LARGEST_EFFECT = 1.8
 _PIVOT_RADII_UM = (0.5, 2.0)
 _PIVOT_SWEEPS_RAD = (0.3, np.pi)  # of the half of them that do not swing all around
 _PIVOT_DIFFUSION_RAD2_S = 0.2
@@ -93,7 +93,7 @@ def _gliding(
     view: View,
     rng: np.random.Generator,
 ) -> tuple[SeenPositions, Motion]:
-    fastest = gliding_motion(np.array([_LARGEST_EFFECT]), condition, truth=truth)
+    fastest = gliding_motion(np.array([LARGEST_EFFECT]), condition, truth=truth)
     reach = float(fastest.reach(scenario.n_frames * scenario.frame_s)[0])
     x, y = _around(expected, scenario, view=view, reach_um=reach, rng=rng)
     motion = gliding_motion(
@@ -179,7 +179,7 @@ def factors(level: str, scenario: Scenario, *, rng: np.random.Generator) -> tupl
 def effects(sd: float, n: int, *, rng: np.random.Generator) -> Floats:
     """Factors of mean 1 and SD ``sd``, (n,); drawn again outside 0.2 to 1.8, so that 1 stays."""
     values = 1 + sd * rng.standard_normal(n)
-    while np.any(beyond := np.abs(values - 1) > _LARGEST_EFFECT - 1):
+    while np.any(beyond := np.abs(values - 1) > LARGEST_EFFECT - 1):
         values[beyond] = 1 + sd * rng.standard_normal(int(beyond.sum()))
     return values
 
