@@ -28,7 +28,7 @@ from glidefit.commands.wording import counted
 def command(recipe: Path, out: Path, seed: int | None) -> None:
     """Make an assay with known truth from a recipe.
 
-    RECIPE is a TOML file; that of the example (example_tracks/recipe.toml) shows every key.
+    RECIPE is a TOML file such as that of the example (example_tracks/recipe.toml).
     """
     from glidefit.pipeline.simulate import simulate
 

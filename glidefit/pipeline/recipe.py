@@ -13,8 +13,10 @@ from pathlib import Path
 from typing import Any
 
 from glidefit.errors import InputError, InputErrors
+from glidefit.kernels.filament_optics import FilamentOptics, FilmFaults
+from glidefit.kernels.filament_population import FilamentLaw
 from glidefit.kernels.synthetic_frames import CameraFaults
-from glidefit.steps.simulate import Scenario, ScenarioCondition, Spread
+from glidefit.steps.simulate import Scenario, ScenarioCondition
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,16 +37,66 @@ class Video:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class FilamentFilming:
+    """What the filaments of a part are like and how their videos look."""
+
+    signal_to_noise: float = 4.0  # peak of a filament over the noise there
+    psf_um: float = 0.13
+    background_photons: float = 20.0
+    read_noise: float = 1.6
+    labels_per_um: float = 60.0  # fluorophores that shine; 0 is even labelling
+    length_um: float = 8.0  # mean
+    length_spread: float = 0.5  # SD of the logarithm
+    bundled_share: float = 0.0  # of the gliding filaments
+    detach_rate_per_s: float = 0.0  # as many land
+    faults: FilmFaults = dataclasses.field(default_factory=FilmFaults)
+
+    def __post_init__(self) -> None:
+        if not (self.signal_to_noise > 0 and self.psf_um > 0):
+            raise ValueError("signal_to_noise and psf_um must be > 0")
+        _ = self.law, self.optics(1.0)  # their own checks
+
+    @property
+    def law(self) -> FilamentLaw:
+        """What the filaments are like; how many there are is the scenario's."""
+        return FilamentLaw(
+            length_um=self.length_um,
+            length_spread=self.length_spread,
+            bundled_share=self.bundled_share,
+            detach_rate=self.detach_rate_per_s,
+        )
+
+    def optics(self, pixel_um: float) -> FilamentOptics:
+        """How they look to a camera."""
+        return FilamentOptics.with_signal_to_noise(
+            self.signal_to_noise,
+            psf_um=self.psf_um,
+            pixel_um=pixel_um,
+            background_photons=self.background_photons,
+            read_noise=self.read_noise,
+            labels_per_um=self.labels_per_um,
+        )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Part:
     """One scenario of a recipe and how it is filmed."""
 
     scenario: Scenario
     video: Video | None = None
+    filament_video: FilamentFilming | None = None
     chamber_prefix: str = "c"  # of chamber labels, so that parts filmed on one day stay apart
 
     def __post_init__(self) -> None:
         if self.scenario.seed < 0:
             raise ValueError("seed must be >= 0")
+        if self.video is not None and self.filament_video is not None:
+            raise ValueError("a part has a video (of spots) or a filament_video, not both")
+        others = self.scenario.pivoting_fraction + self.scenario.detached_fraction
+        if self.filament_video is not None and others > 0:
+            raise ValueError(
+                "pivoting_fraction and detached_fraction must be 0 with a filament_video"
+            )
 
 
 def read_recipe(path: Path) -> tuple[Part, ...]:
@@ -82,8 +134,9 @@ def _part(data: Any, where: str, errors: list[InputError]) -> Part | None:
     data = dict(data) if isinstance(data, Mapping) else data
     values: dict[str, Any] = {}
     if isinstance(data, dict):
-        if "video" in data:
-            values["video"] = _record(Video, data.pop("video"), f"{where}, video", errors)
+        for key, kind in (("video", Video), ("filament_video", FilamentFilming)):
+            if key in data:
+                values[key] = _record(kind, data.pop(key), f"{where}, {key}", errors)
         if "chamber_prefix" in data:
             prefix = data.pop("chamber_prefix")
             values["chamber_prefix"] = _value(str, prefix, f"{where}, chamber_prefix", errors)
@@ -102,15 +155,6 @@ def _unknown(where: str, key: str, known: list[str]) -> InputError:
         expected="a known key",
         remedy=f"Did you mean {near[0]!r}?" if near else f"The keys here are {', '.join(known)}.",
     )
-
-
-_NESTED = {
-    "conditions": ScenarioCondition,
-    "speed_spread": Spread,
-    "rotational_diffusion_spread": Spread,
-    "motile_fraction_spread": Spread,
-    "faults": CameraFaults,
-}
 
 
 def _record(kind: type[Any], data: Any, where: str, errors: list[InputError]) -> Any:
@@ -133,8 +177,8 @@ def _record(kind: type[Any], data: Any, where: str, errors: list[InputError]) ->
                 _record(ScenarioCondition, item, f"{where}, condition {n + 1}", errors)
                 for n, item in enumerate(items)
             )
-        elif key in _NESTED:
-            values[key] = _record(_NESTED[key], value, f"{where}.{key}", errors)
+        elif dataclasses.is_dataclass(hints[key]):
+            values[key] = _record(hints[key], value, f"{where}.{key}", errors)
         else:
             values[key] = _value(hints[key], value, f"{where}, {key}", errors)
     return _made(kind, values, where, errors) if len(errors) == before else None

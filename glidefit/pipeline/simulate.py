@@ -10,20 +10,18 @@ from typing import Any
 import numpy as np
 
 from glidefit.errors import InputError
-from glidefit.kernels.synthetic_frames import SpotOptics, spot_frames
-from glidefit.pipeline.recipe import Part, Video, read_recipe
+from glidefit.pipeline.filming import film_filaments, film_spots
+from glidefit.pipeline.recipe import Part, read_recipe
 from glidefit.running import folder as run_folder
 from glidefit.running.progress import progress
-from glidefit.steps.simulate import (
-    Scenario,
-    SimulatedAssay,
-    SimulatedRecording,
-    simulate_assay,
-)
+from glidefit.steps.simulate import SimulatedAssay, SimulatedRecording, simulate_assay
 
 
 def simulate(recipe: Path, out: Path, *, seed: int | None = None) -> int:
-    """Write the assay of a recipe: assay.csv, tracks/, videos/, truth.csv; number of recordings.
+    """Write the assay of a recipe; number of recordings.
+
+    The folder gets assay.csv, truth.csv and recipe.toml, and what it needs of tracks/, videos/
+    and, for the filaments of every frame, truth/.
 
     Parameters
     ----------
@@ -111,7 +109,7 @@ def _is_simulation(folder: Path) -> bool:
     """True for a folder that an earlier simulation wrote, or that holds a recipe alone."""
     names = {path.name for path in folder.iterdir()}
     lists = {"assay.csv", "truth.csv", "recipe.toml"}
-    return names == {"recipe.toml"} or lists <= names <= lists | {"tracks", "videos"}
+    return names == {"recipe.toml"} or lists <= names <= lists | {"tracks", "videos", "truth"}
 
 
 def _write_lists(
@@ -142,53 +140,22 @@ def _written(folder: Path, film: _Film, name: str) -> dict[str, str]:
         "minutes": f"{recording.minutes:g}",
         "control": "yes" if recording.control else "",
     }
-    if film.part.video is None:
-        run_folder.write_files(folder, {f"tracks/{name}.csv": track_table_text(recording.tracks)})
-        return {
-            "recording": f"tracks/{name}.csv",
-            **common,
-            "shape": "",
-            "frame_s": f"{scenario.frame_s:.10g}",
-            "exposure_s": f"{scenario.exposure_s:.10g}",
-        }
-    (folder / "videos").mkdir(exist_ok=True)
-    _film(folder / f"videos/{name}.ome.tif", scenario, film.part.video, recording)
-    return {"recording": f"videos/{name}.ome.tif", **common, "shape": "spot"}
-
-
-def _film(path: Path, scenario: Scenario, video: Video, recording: SimulatedRecording) -> None:
-    from zlib import crc32
-
-    from glidefit.writing.recordings import write_video
-
-    truth = recording.truth
-    shape = tuple(round(side / scenario.pixel_um) for side in reversed(scenario.field_um))
-    frames = spot_frames(
-        truth.track,
-        truth.frame,
-        truth.exposed_x_um,
-        truth.exposed_y_um,
-        n_frames=scenario.n_frames,
-        frame_s=scenario.frame_s,
-        shape_px=(shape[0], shape[1]),
-        optics=SpotOptics.with_signal_to_noise(
-            video.signal_to_noise,
-            psf_um=video.psf_um,
-            pixel_um=scenario.pixel_um,
-            background_photons=video.background_photons,
-            read_noise=video.read_noise,
-        ),
-        faults=video.faults,
-        rng=np.random.default_rng([scenario.seed, crc32(recording.name.encode())]),
-    )
-    write_video(
-        path,
-        (frame.image for frame in frames),
-        n_frames=scenario.n_frames,
-        pixel_um=scenario.pixel_um,
-        frame_s=scenario.frame_s,
-        exposure_s=scenario.exposure_s,
-    )
+    video = f"videos/{name}.ome.tif"
+    if film.part.filament_video is not None:
+        truth = film_filaments(folder / video, scenario, film.part.filament_video, recording)
+        run_folder.write_files(folder, {f"truth/{name}.csv": truth})
+        return {"recording": video, **common, "shape": "filament"}
+    if film.part.video is not None:
+        film_spots(folder / video, scenario, film.part.video, recording)
+        return {"recording": video, **common, "shape": "spot"}
+    run_folder.write_files(folder, {f"tracks/{name}.csv": track_table_text(recording.tracks)})
+    return {
+        "recording": f"tracks/{name}.csv",
+        **common,
+        "shape": "",
+        "frame_s": f"{scenario.frame_s:.10g}",
+        "exposure_s": f"{scenario.exposure_s:.10g}",
+    }
 
 
 def _truth_rows(part: Part, assay: SimulatedAssay) -> list[dict[str, str]]:
