@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from glidefit.evidence import CleanRecording
-from glidefit.pipeline.study import ConditionNumbers, condition_numbers
+from glidefit.pipeline.study import ConditionNumbers, condition_numbers, with_borrowed
 from glidefit.settings import Settings
 from glidefit.steps.clean import clean
 from glidefit.steps.simulate import Scenario, SimulatedRecording, simulate_assay
@@ -44,8 +44,10 @@ def experiment(
         condition.name: [r for r in recordings if r.condition == condition.name]
         for condition in scenario.conditions
     }
-    return {
+    numbers = {
         name: condition_numbers(own, settings=settings, rng=rng)
         for name, own in by_condition.items()
         if any(r.clean.kept.any() for r in own)
     }
+    control = next((c.name for c in scenario.conditions if c.control), "")
+    return with_borrowed(numbers, control=control, settings=settings)
