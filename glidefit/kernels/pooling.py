@@ -27,7 +27,7 @@ Ints = NDArray[np.int64]
 # own interval has a large own square, so that overall coverage is above the level, which the
 # second spends: together they leave 95.0 to 95.2 %.
 LARGER_AT, SMALLER_AT = 0.25, 0.025
-_NODES = 200
+_NODES = 100
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -161,8 +161,9 @@ def borrowed_days(own: Scatter, lender: Scatter, *, level: float) -> tuple[float
     square = first * lender.day_square
     if change != 0 and least > 0:
         df = sum(one.chamber_df for one in both)
-        share = min(change / least, 0.999)
-        factor = second_factor(level, lender.day_df, max(df, 1), round(share, 3))
+        # Rounded away from nothing, which is the safe side, so that few factors are computed.
+        share = min(math.copysign(math.ceil(20 * abs(change) / least) / 20, change), 0.95)
+        factor = second_factor(level, lender.day_df, max(df, 1), share)
         square = max(square + factor * change, t_quantile(level, math.inf) ** 2 * least)
     return math.sqrt(square / own.days), lender.day_df
 
@@ -234,6 +235,7 @@ def _held(first: float, second: float, df: int, other_df: int, share: float) -> 
     return float(np.mean(erf(np.sqrt(np.maximum(a + b, 0) / 2))))
 
 
+@functools.lru_cache(maxsize=256)
 def _chi_square(df: int) -> Floats:
     """χ²/df at the middles of equal probabilities."""
     from scipy.special import chdtri

@@ -236,7 +236,7 @@ def _estimate(
         return Estimate(value=value, level=level, problem="" if resolved else rule.unresolved)
     spread = _spread_on_scale(combined, own, rule)
     half = resampling.t_quantile(level, units - 1) * spread
-    if rule.unresolved and centre - half <= 0 and (not resolved or _at_zero(combined, own)):
+    if rule.unresolved and (not resolved or _at_zero(combined, own, reached=centre - half <= 0)):
         return _limit(combined, columns, rule, settings)
     if rule.relative_to == "binomial" and centre in (0.0, 1.0) and combined.filaments is not None:
         return all_or_none(combined, own[0], centre, level)
@@ -282,9 +282,15 @@ def _students_t(combined: Combined, units: int) -> str:
     )
 
 
-def _at_zero(combined: Combined, columns: list[int]) -> bool:
-    """Whether a chamber does not tell a column from 0."""
-    return combined.at_zero is not None and bool(np.any(combined.at_zero[columns] > 0))
+def _at_zero(combined: Combined, columns: list[int], *, reached: bool) -> bool:
+    """Whether chambers do not tell a column from 0: several of them, or one and the interval.
+
+    Estimates that stop at 0 are too large on the average where that happens often, and alike.
+    """
+    if combined.at_zero is None:
+        return False
+    there = int(combined.at_zero[columns].max())
+    return there >= (1 if reached else max(combined.level_units["chambers"] / 8, 1))
 
 
 def _limit(
