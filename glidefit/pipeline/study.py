@@ -89,7 +89,7 @@ def study(
         raise NothingLeft("\n".join(result.problems[0] for result in results))
     return StudyResult(
         name=name,
-        conditions=tuple(results),
+        conditions=tuple(_with_variation(results, seed=seed)),
         comparisons=(),
         recordings=tuple(recording_results),
         settings=_setting_rows(settings),
@@ -98,6 +98,17 @@ def study(
         version=glidefit.__version__,
         sheet_sha256=sheet_sha256,
     )
+
+
+def _with_variation(results: Sequence[ConditionResult], *, seed: int) -> list[ConditionResult]:
+    """The results with their variance components, for which all conditions must be there."""
+    from glidefit.steps.components import variation
+
+    out = []
+    for result in results:
+        rng = np.random.default_rng([seed, zlib.crc32(result.condition.encode()), 1])
+        out.append(replace(result, variation=variation(results, result, rng=rng)))
+    return out
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
