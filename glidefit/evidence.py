@@ -125,8 +125,8 @@ class Combined:
         Standard error of the first s values brought by each level alone; NaN where it does not
         repeat.
     level_units : dict of str: int
-    at_zero : (p,) array of int, optional
-        Chambers that put the column at 0 or less, where a variance that is not seen ends up.
+    by_chamber : (c, s) array, optional
+        Those first values of each chamber.
     filaments : (u, p) array, optional
         For fractions: filaments that tell each value, by unit of that level.
     """
@@ -137,7 +137,7 @@ class Combined:
     covers: str
     level_error: dict[str, Floats]
     level_units: dict[str, int]
-    at_zero: Ints | None = None
+    by_chamber: Floats | None = None
     filaments: Floats | None = None
 
 

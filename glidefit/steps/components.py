@@ -241,6 +241,8 @@ def _parts(
     if c.filament > 0:
         known.append(("filaments", c.filament, filaments, filament_df))
     total = float(np.nansum([c.day, c.chamber, c.filament]))
+    if not total > 0:  # a fraction that is 1 in every chamber has no spread to split
+        return []
     ends = [(1 - c.level) / 2, (1 + c.level) / 2]
     out = []
     for level, variance, drawn, df in known:
@@ -254,7 +256,7 @@ def _parts(
                 high=_short(high),
                 confidence=c.level,
                 df=df,
-                share=_short(variance / total) if total > 0 else NAN,
+                share=_short(variance / total),
             )
         )
     return out

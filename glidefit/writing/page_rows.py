@@ -272,7 +272,7 @@ def variation_tables(
                 VariationRow(
                     level=_VARIATION_LEVELS.get(part.level, visible(part.level)),
                     sd=percent(part.relative_sd),
-                    interval=f"{percent(part.low)} to {percent(part.high)}",
+                    interval=f"{percent(part.low).removesuffix(' %')} to {percent(part.high)}",
                     share=percent(part.share),
                 )
                 for part in parts

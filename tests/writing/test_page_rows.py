@@ -142,7 +142,7 @@ def test_variation_has_a_row_a_level_with_its_interval(study):
         "chambers of a day",
         "filaments, on a chamber's mean",
     ]
-    assert (rows[0].sd, rows[0].interval, rows[0].share) == ("7.1 %", "0 % to 45 %", "72 %")
+    assert (rows[0].sd, rows[0].interval, rows[0].share) == ("7.1 %", "0 to 45 %", "72 %")
 
 
 def test_a_one_sided_limit_is_called_one(study):

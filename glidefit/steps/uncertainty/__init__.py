@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -82,7 +82,7 @@ def combine(
             "recordings": sum(len(np.unique(c.recording_of_track)) for c in chambers),
             "tracks": sum(len(c.recording_of_track) for c in chambers),
         },
-        at_zero=np.sum(values <= 0, axis=0),
+        by_chamber=values[:, scalars],
         filaments=filaments,
     )
 
@@ -94,7 +94,8 @@ class _Rule:
     ``scale`` maps columns to the scale on which the quantity is nearly linear, ``back`` that
     scale to the quantity; ``below`` and ``beyond`` are its own limits. ``relative_to`` says to what
     the scatter is proportional when conditions are compared: "value", or "binomial", √(f (1 − f));
-    "" if they are not. ``instead`` are columns that can tell when all chambers are at the limit.
+    "" if they are not. ``instead`` are columns that can tell, below 0 too, when chambers are at the
+    limit; ``beside`` is a column and the power of it beside which the last column may vanish.
     """
 
     columns: tuple[str, ...]
@@ -106,6 +107,7 @@ class _Rule:
     unresolved: str = ""  # what to say when the value itself leaves the limits
     relative_to: str = ""
     instead: tuple[str, ...] = ()
+    beside: tuple[str, float] | None = None
 
     def unit(self, centre: float) -> float:
         """That to which the scatter is proportional; 0 or NaN where there is none."""
@@ -135,6 +137,7 @@ RULES = {
         unresolved=_STRAIGHT,
         relative_to="value",
         instead=("msd_rotational_diffusion",),
+        beside=("msd_rotational_diffusion", 1.0),
     ),
     # Curvature per path, D_r / v, is linear in what is measured; its inverse is not.
     "persistence_length_um": _Rule(
@@ -145,6 +148,7 @@ RULES = {
         unresolved=_STRAIGHT,
         relative_to="value",
         instead=("msd_speed", "msd_rotational_diffusion"),
+        beside=("msd_rotational_diffusion", 1.0),
     ),
     "path_persistence_length_um": _Rule(
         columns=("speed", "rotational_diffusion"),
@@ -154,6 +158,7 @@ RULES = {
         unresolved=_STRAIGHT,
         relative_to="value",
         instead=("msd_speed", "msd_rotational_diffusion"),
+        beside=("msd_rotational_diffusion", 1.0),
     ),
     "translational_diffusion_um2_s": _Rule(
         columns=("longitudinal_diffusion",), scale=lambda d: d, below=0.0, unresolved=_NOISE
@@ -166,6 +171,7 @@ RULES = {
         scale=lambda s: s,
         back=_root,
         unresolved="not resolved: filaments differ by less than the measurement can tell",
+        beside=("speed", 2.0),
     ),
     "turning_rate_rad_s": _Rule(columns=("turning_rate",), scale=lambda w: w),
     "frame_speed_um_s": _Rule(
@@ -186,6 +192,11 @@ RULES = {
         relative_to="binomial",
     ),
 }
+
+
+# A value this small beside the largest is as good as 0. One in eight chambers there makes a limit
+# whatever the interval; where more than two in three are, their spread says nothing.
+_TRIFLE, _FEW_AT_ZERO, _MOST_AT_ZERO = 1e-3, 1 / 8, 2 / 3
 
 
 def estimates(
@@ -236,8 +247,9 @@ def _estimate(
         return Estimate(value=value, level=level, problem="" if resolved else rule.unresolved)
     spread = _spread_on_scale(combined, own, rule)
     half = resampling.t_quantile(level, units - 1) * spread
-    if rule.unresolved and (not resolved or _at_zero(combined, own, reached=centre - half <= 0)):
-        return _limit(combined, columns, rule, settings)
+    stopped = _share_at_zero(combined, columns, rule) if rule.unresolved else 0.0
+    if (rule.unresolved and not resolved) or stopped > (0 if centre <= half else _FEW_AT_ZERO):
+        return _limit(combined, columns, rule, settings, stopped)
     if rule.relative_to == "binomial" and centre in (0.0, 1.0) and combined.filaments is not None:
         return all_or_none(combined, own[0], centre, level)
     if spread == 0:
@@ -282,40 +294,52 @@ def _students_t(combined: Combined, units: int) -> str:
     )
 
 
-def _at_zero(combined: Combined, columns: list[int], *, reached: bool) -> bool:
-    """Whether chambers do not tell a column from 0: several of them, or one and the interval.
+def _share_at_zero(combined: Combined, columns: Mapping[str, int], rule: _Rule) -> float:
+    """Share of the chambers that put the last column of a rule at 0, or as good as there.
 
-    Estimates that stop at 0 are too large on the average where that happens often, and alike.
+    There a likelihood stops that would rather go on, at 0 or a trifle above it.
     """
-    if combined.at_zero is None:
-        return False
-    there = int(combined.at_zero[columns].max())
-    return there >= (1 if reached else max(combined.level_units["chambers"] / 8, 1))
+    if combined.by_chamber is None:
+        return 0.0
+    values = combined.by_chamber[:, columns[rule.columns[-1]]]
+    values = values[np.isfinite(values)]
+    largest = np.abs(values).max(initial=0.0)
+    if rule.beside is not None and rule.beside[0] in columns:
+        other = combined.by_chamber[:, columns[rule.beside[0]]]
+        # The square of a thousandth is a millionth.
+        power = rule.beside[1]
+        beside = _TRIFLE ** (power - 1) * np.nanmax(np.abs(other), initial=0.0) ** power
+        largest = max(largest, float(beside))
+    return float(np.mean(values <= _TRIFLE * largest)) if len(values) else 0.0
 
 
 def _limit(
-    combined: Combined, columns: Mapping[str, int], rule: _Rule, settings: IntervalSettings
+    combined: Combined,
+    columns: Mapping[str, int],
+    rule: _Rule,
+    settings: IntervalSettings,
+    stopped: float,
 ) -> Estimate:
     """A one-sided limit for what is not told from 0: at most so much, or at least so long.
 
     Counted from 0 where the value lies below, so that the limit is never nearer to 0 than the
-    spread allows. That the choice between an interval and a limit is the data's costs no coverage:
-    0 is outside neither, and what is well above 0 is hardly ever taken for it.
+    spread allows. Chambers that stop at 0 are alike there, more than they should; so the limit of
+    columns that do not stop is taken if it is farther, and none without them if most stop. That
+    the choice between an interval and a limit is the data's costs no coverage: 0 is outside
+    neither, and what is well above 0 is hardly ever taken for it.
     """
-    level, names = settings.level, rule.columns
-    spread = _spread_on_scale(combined, [columns[name] for name in names], rule)
-    if spread == 0 and rule.instead and all(name in columns for name in rule.instead):
-        names = rule.instead
-        spread = _spread_on_scale(combined, [columns[name] for name in names], rule)
-    own = [columns[name] for name in names]
-    units = int(combined.units[own].min())
-    centre = float(rule.scale(*combined.value[own]))
-    if not (spread > 0 and units > 1 and np.isfinite(centre)):
-        return Estimate(level=level, problem=rule.unresolved)
+    level = settings.level
+    units = int(combined.units[[columns[name] for name in rule.columns]].min())
     # One-sided: all that may be missed is on one side.
     t = resampling.t_quantile(2 * level - 1, units - 1)
-    end = rule.back(max(centre, 0.0) + t * spread)
-    source = " of the mean squared displacement" if names == rule.instead else ""
+    ends = [] if stopped > _MOST_AT_ZERO else [(_upper_end(combined, columns, rule, t), "")]
+    if rule.instead and all(name in columns for name in rule.instead):
+        other = replace(rule, columns=rule.instead)
+        ends.append((_upper_end(combined, columns, other, t), " of the mean squared displacement"))
+    end, source = max(ends, default=(0.0, ""))
+    if not end > 0:
+        return Estimate(level=level, problem=rule.unresolved)
+    end = rule.back(end)
     return Estimate(
         low=end if rule.decreasing else float("nan"),
         high=float("nan") if rule.decreasing else end,
@@ -324,6 +348,14 @@ def _limit(
         method=f"one-sided limit{source}: {_students_t(combined, units)}",
         problem=rule.unresolved,
     )
+
+
+def _upper_end(combined: Combined, columns: Mapping[str, int], rule: _Rule, t: float) -> float:
+    """Upper end on the scale of a rule, counted from 0; 0 if there is no spread."""
+    own = [columns[name] for name in rule.columns]
+    spread = _spread_on_scale(combined, own, rule)
+    centre = float(rule.scale(*combined.value[own]))
+    return max(centre, 0.0) + t * spread if spread > 0 and np.isfinite(centre) else 0.0
 
 
 def band(
