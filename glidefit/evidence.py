@@ -90,6 +90,8 @@ class ChamberEvidence:
     influence : (m, p) array
     recording_of_track : (m,) array of int
         Index of the recording (field of view) within the chamber.
+    filaments : (p,) array, optional
+        For fractions: how many filaments of equal weight tell each value.
     """
 
     day: str
@@ -97,6 +99,7 @@ class ChamberEvidence:
     values: Floats
     influence: Floats
     recording_of_track: Ints
+    filaments: Floats | None = None
 
     def __post_init__(self) -> None:
         if self.influence.shape != (len(self.recording_of_track), len(self.values)):
@@ -122,6 +125,10 @@ class Combined:
         Standard error of the first s values brought by each level alone; NaN where it does not
         repeat.
     level_units : dict of str: int
+    by_chamber : (c, s) array, optional
+        Those first values of each chamber.
+    filaments : (u, p) array, optional
+        For fractions: filaments that tell each value, by unit of that level.
     """
 
     value: Floats
@@ -130,6 +137,8 @@ class Combined:
     covers: str
     level_error: dict[str, Floats]
     level_units: dict[str, int]
+    by_chamber: Floats | None = None
+    filaments: Floats | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -149,3 +158,27 @@ class TrackDiffusion:
     low: Floats
     high: Floats
     problem: NDArray[np.object_]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BorrowedSpread:
+    """How far a quantity of one condition scatters, as other conditions of the study tell it.
+
+    Parameters
+    ----------
+    half_width : float
+        Of the interval, on the scale on which it is made.
+    df : int
+        Degrees of freedom.
+    covers : str
+        Level to which the interval then generalises: "days" or "chambers".
+    sources : tuple of str
+        The conditions that it was taken from, without the one it is for.
+    method : str
+    """
+
+    half_width: float
+    df: int
+    covers: str
+    sources: tuple[str, ...]
+    method: str

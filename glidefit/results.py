@@ -139,6 +139,20 @@ class LevelSpread:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class VariancePart:
+    """How far the values of one level differ, with its own interval; relative to the value."""
+
+    quantity: str
+    level: str  # "days", "day × condition", "chambers", "filaments"
+    relative_sd: float
+    low: float
+    high: float
+    confidence: float  # level of that interval
+    df: int  # degrees of freedom of the mean square that it comes from
+    share: float  # of the variance of a chamber on some day; day × condition is part of the days
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Drift:
     """Motion common to the stuck objects of a recording."""
 
@@ -217,6 +231,7 @@ class ConditionResult:
     heading_diffusion_rad2_s: float  # D_r read off the heading correlation
     methods: str  # a paragraph to quote
     model_checks: tuple[ModelCheck, ...] = ()
+    variation: tuple[VariancePart, ...] = ()
 
     def __post_init__(self) -> None:
         if missing := QUANTITIES.keys() - self.estimates.keys():

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from glidefit.evidence import CleanRecording
-from glidefit.pipeline.study import ConditionNumbers, condition_numbers
+from glidefit.pipeline.study import ConditionNumbers, condition_numbers, with_borrowed
 from glidefit.settings import Settings
 from glidefit.steps.clean import clean
 from glidefit.steps.simulate import Scenario, SimulatedAssay, SimulatedRecording, simulate_assay
@@ -67,6 +67,8 @@ def analysed(scenario: Scenario, *, settings: Settings, rng: np.random.Generator
         for name, own in by_condition.items()
         if any(r.clean.kept.any() for r in own)
     }
+    control = next((c.name for c in scenario.conditions if c.control), "")
+    numbers = with_borrowed(numbers, control=control, settings=settings)
     return Analysed(assay=assay, recordings=recordings, numbers=numbers)
 
 

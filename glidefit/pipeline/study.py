@@ -3,15 +3,21 @@
 from __future__ import annotations
 
 import zlib
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 import glidefit
 from glidefit.errors import NothingLeft
-from glidefit.evidence import REASONS, ChamberEvidence, CleanRecording, Combined
+from glidefit.evidence import (
+    REASONS,
+    BorrowedSpread,
+    ChamberEvidence,
+    CleanRecording,
+    Combined,
+)
 from glidefit.results import ConditionResult, Estimate, RecordingResult, SettingRow, StudyResult
 from glidefit.settings import Settings, SourcedSettings, declarations
 
@@ -53,15 +59,29 @@ def study(
     """
     from glidefit.steps.fields import same_fields
 
+    by_condition = {
+        # The order of rows in a sheet means nothing, so it must not change which draws a day gets.
+        condition: sorted(
+            (r for r in recordings if r.condition == condition),
+            key=lambda r: (r.day, r.chamber, r.recording),
+        )
+        for condition, _, _ in conditions
+    }
+    numbers = _all_numbers(
+        by_condition,
+        control=next((name for name, control, _ in conditions if control), ""),
+        settings=settings.values,
+        seed=seed,
+    )
     results = [
         _condition(
             condition,
             control,
             slug,
-            [r for r in recordings if r.condition == condition],
+            by_condition[condition],
+            numbers.get(condition),
             preparations[condition],
             settings,
-            seed,
         )
         for condition, control, slug in conditions
     ]
@@ -69,7 +89,7 @@ def study(
         raise NothingLeft("\n".join(result.problems[0] for result in results))
     return StudyResult(
         name=name,
-        conditions=tuple(results),
+        conditions=tuple(_with_variation(results, seed=seed)),
         comparisons=(),
         recordings=tuple(recording_results),
         settings=_setting_rows(settings),
@@ -78,6 +98,17 @@ def study(
         version=glidefit.__version__,
         sheet_sha256=sheet_sha256,
     )
+
+
+def _with_variation(results: Sequence[ConditionResult], *, seed: int) -> list[ConditionResult]:
+    """The results with their variance components, for which all conditions must be there."""
+    from glidefit.steps.components import variation
+
+    out = []
+    for result in results:
+        rng = np.random.default_rng([seed, zlib.crc32(result.condition.encode()), 1])
+        out.append(replace(result, variation=variation(results, result, rng=rng)))
+    return out
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,6 +120,7 @@ class ConditionNumbers:
     combined: Combined
     motile: Combined
     estimates: dict[str, Estimate]
+    borrowed: dict[str, BorrowedSpread] = field(default_factory=dict)
 
 
 def condition_numbers(
@@ -104,9 +136,59 @@ def condition_numbers(
         fitted.chambers, settings=interval, rng=rng, n_scalars=len(fitted.columns)
     )
     motile = uncertainty.combine(gliding, settings=interval, rng=rng)
-    known = uncertainty.estimates(combined, fitted.columns, settings=interval)
-    known |= uncertainty.estimates(motile, motility.COLUMNS, settings=interval)
-    if fitted.model != "circling":
+    numbers = ConditionNumbers(
+        fitted=fitted, gliding=gliding, combined=combined, motile=motile, estimates={}
+    )
+    known = _estimates(numbers, settings=settings)
+    known["smallest_speed_um_s"] = summarise.smallest_speed(recordings, level=interval.level)
+    return replace(numbers, estimates=known)
+
+
+def with_borrowed(
+    numbers: Mapping[str, ConditionNumbers], *, control: str, settings: Settings
+) -> dict[str, ConditionNumbers]:
+    """The same values, with the intervals that the conditions of a study give each other.
+
+    Parameters
+    ----------
+    numbers : mapping
+        By condition.
+    control : str
+        Its name; "" without one.
+    settings : Settings
+    """
+    from glidefit.steps import motility
+    from glidefit.steps.uncertainty.borrowing import borrowed_spreads
+
+    spreads = borrowed_spreads(
+        {
+            name: ((one.fitted.chambers, one.fitted.columns), (one.gliding, motility.COLUMNS))
+            for name, one in numbers.items()
+        },
+        control=control,
+        settings=settings.interval,
+    )
+    out = {}
+    for name, one in numbers.items():
+        borrowing = replace(one, borrowed=spreads[name])
+        known = _estimates(borrowing, settings=settings)
+        out[name] = replace(borrowing, estimates=one.estimates | known)
+    return out
+
+
+def _estimates(numbers: ConditionNumbers, *, settings: Settings) -> dict[str, Estimate]:
+    """Without the quantities that the model does not have."""
+    from glidefit.steps import motility, uncertainty
+
+    known: dict[str, Estimate] = {}
+    for combined, columns in (
+        (numbers.combined, numbers.fitted.columns),
+        (numbers.motile, motility.COLUMNS),
+    ):
+        known |= uncertainty.estimates(
+            combined, columns, settings=settings.interval, borrowed=numbers.borrowed
+        )
+    if numbers.fitted.model != "circling":
         del known["turning_rate_rad_s"]
     given = settings.fit.known
     for name, key in (
@@ -115,15 +197,31 @@ def condition_numbers(
     ):
         if name not in given.freed and name not in given.fixed:
             del known[key]
-    for key in given.held:
-        if key in known:
-            known[key] = Estimate(
-                value=known[key].value, level=interval.level, method="held at the value given"
-            )
-    known["smallest_speed_um_s"] = summarise.smallest_speed(recordings, level=interval.level)
-    return ConditionNumbers(
-        fitted=fitted, gliding=gliding, combined=combined, motile=motile, estimates=known
-    )
+    for key in set(given.held) & set(known):
+        known[key] = Estimate(
+            value=known[key].value, level=settings.interval.level, method="held at the value given"
+        )
+    return known
+
+
+def _all_numbers(
+    by_condition: Mapping[str, Sequence[CleanRecording]],
+    *,
+    control: str,
+    settings: Settings,
+    seed: int,
+) -> dict[str, ConditionNumbers]:
+    """Numbers of all conditions that keep a track; each draws the same whatever the others."""
+    numbers = {
+        condition: condition_numbers(
+            recordings,
+            settings=settings,
+            rng=np.random.default_rng([seed, zlib.crc32(condition.encode())]),
+        )
+        for condition, recordings in by_condition.items()
+        if any(r.clean.kept.any() for r in recordings)
+    }
+    return with_borrowed(numbers, control=control, settings=settings)
 
 
 def _setting_rows(settings: SourcedSettings) -> tuple[SettingRow, ...]:
@@ -144,17 +242,15 @@ def _condition(
     control: bool,
     slug: str,
     recordings: Sequence[CleanRecording],
+    numbers: ConditionNumbers | None,
     preparations: list[str],
     sourced: SourcedSettings,
-    seed: int,
 ) -> ConditionResult:
     from glidefit.steps import ageing, fit, motility, summarise, uncertainty
 
     settings = sourced.values
     level = settings.interval.level
-    # The order of rows in a sheet means nothing, so it must not change which draws a day gets.
-    recordings = sorted(recordings, key=lambda r: (r.day, r.chamber, r.recording))
-    if not any(r.clean.kept.any() for r in recordings):
+    if numbers is None:
         return summarise.condition_result(
             condition=condition,
             slug=slug,
@@ -163,9 +259,6 @@ def _condition(
             level=level,
             problem=_why_nothing(condition, recordings, sourced),
         )
-    # The same numbers whatever the other conditions of the sheet, and in whatever order.
-    rng = np.random.default_rng([seed, zlib.crc32(condition.encode())])
-    numbers = condition_numbers(recordings, settings=settings, rng=rng)
     fitted, combined, motile = numbers.fitted, numbers.combined, numbers.motile
 
     def band(columns: slice) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -185,7 +278,7 @@ def _condition(
         recordings, longest_lag_s=fitted.longest_lag_s, pooled=fitted.pooled
     )
     counted = summarise.counts(recordings)
-    covers = summarise.generalises(condition, combined, preparations)
+    covers = summarise.generalises(condition, combined, preparations, numbers.borrowed)
     estimates = summarise.all_estimates(numbers.estimates, level=level)
     drawn = summarise.drawn(recordings, most=settings.page.drawn_tracks)
     by_chamber = {

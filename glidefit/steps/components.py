@@ -8,9 +8,13 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from glidefit.designs import Components, Interaction
-from glidefit.kernels.components import interaction_mean_square, nested_components
-from glidefit.results import NAN, ChamberResult, ConditionResult
+from glidefit.designs import WITH_COMPONENTS, Components, Interaction
+from glidefit.kernels.components import (
+    interaction_mean_square,
+    mean_square_draws,
+    nested_components,
+)
+from glidefit.results import NAN, ChamberResult, ConditionResult, VariancePart
 
 Floats = NDArray[np.float64]
 
@@ -182,3 +186,81 @@ def _within_cells(
         each = own.filament if math.isnan(own.chamber) else own.chamber + own.filament
         parts += [each / len(number[day]) for day in days]
     return float(np.mean(parts)), told
+
+
+# Draws of a generalized interval; its ends are then known to 2 % of their probability.
+_DRAWS = 20_000
+
+
+def variation(
+    conditions: Sequence[ConditionResult], condition: ConditionResult, *, rng: np.random.Generator
+) -> tuple[VariancePart, ...]:
+    """How far days, chambers and filaments differ, each with a generalized interval.
+
+    The intervals draw every mean square as ``square × df / χ²`` and take their differences, so
+    that a level of which three days tell has the wide interval that it deserves. Levels that do
+    not repeat are left out.
+
+    Parameters
+    ----------
+    conditions : sequence of ConditionResult
+        All of the run: those of the same days tell of day × condition.
+    condition : ConditionResult
+    rng : Generator
+    """
+    parts: list[VariancePart] = []
+    for quantity in WITH_COMPONENTS:
+        if condition.estimates[quantity].value > 0 and _with_value(condition.chambers, quantity):
+            own = components(condition, quantity)
+            shared = interaction(conditions, condition, quantity)
+            tracks = sum(c.tracks_kept for c in condition.chambers)
+            parts += _parts(own, shared, max(tracks - len(condition.chambers), 1), rng)
+    return tuple(parts)
+
+
+def _parts(
+    c: Components, shared: Interaction, filament_df: int, rng: np.random.Generator
+) -> list[VariancePart]:
+    def draws(square: float, df: int) -> Floats:
+        return mean_square_draws(square, df=df, n_draws=_DRAWS, rng=rng)
+
+    known: list[tuple[str, float, Floats, int]] = []
+    filaments = draws(c.filament, filament_df)
+    within, change = filaments, np.ones(_DRAWS)
+    if c.chamber_df > 0:
+        within = draws(c.chamber_mean_square, c.chamber_df)
+        change = within / c.chamber_mean_square if c.chamber_mean_square > 0 else change
+    if c.day_df > 0:
+        between = draws(c.day_mean_square, c.day_df) - within
+        known.append(("days", c.day, between / c.chambers_in_day_square, c.day_df))
+    if shared.df > 0:
+        own = draws(shared.mean_square, shared.df) - shared.within * change
+        known.append(("day × condition", shared.variance, own, shared.df))
+    if c.chamber_df > 0:
+        known.append(("chambers", c.chamber, within - filaments, c.chamber_df))
+    if c.filament > 0:
+        known.append(("filaments", c.filament, filaments, filament_df))
+    total = float(np.nansum([c.day, c.chamber, c.filament]))
+    if not total > 0:  # a fraction that is 1 in every chamber has no spread to split
+        return []
+    ends = [(1 - c.level) / 2, (1 + c.level) / 2]
+    out = []
+    for level, variance, drawn, df in known:
+        low, high = np.sqrt(np.maximum(np.quantile(drawn, ends), 0.0))
+        out.append(
+            VariancePart(
+                quantity=c.quantity,
+                level=level,
+                relative_sd=_short(math.sqrt(variance)),
+                low=_short(low),
+                high=_short(high),
+                confidence=c.level,
+                df=df,
+                share=_short(variance / total),
+            )
+        )
+    return out
+
+
+def _short(value: float) -> float:
+    return float(f"{value:.5g}")

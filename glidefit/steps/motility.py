@@ -51,17 +51,21 @@ def _chamber(day: str, chamber: str, recordings: list[CleanRecording]) -> Chambe
         owner.append(np.full(clean.tracks.n_tracks, fields.index(one.field or one.recording)))
     table = np.concatenate(rows).astype(np.float64)
     values, influence = np.full(2, np.nan), np.zeros((len(table), 2))
+    filaments = np.zeros(2)
     for column, (top, bottom) in enumerate(((0, 1), (2, 3))):
         total = table[:, bottom].sum()
         if total > 0:
             values[column] = table[:, top].sum() / total
             influence[:, column] = (table[:, top] - values[column] * table[:, bottom]) / total
+            # So many of equal weight would say as much.
+            filaments[column] = total**2 / np.sum(table[:, bottom] ** 2)
     return ChamberEvidence(
         day=day,
         chamber=chamber,
         values=values,
         influence=influence,
         recording_of_track=np.concatenate(owner),
+        filaments=filaments,
     )
 
 

@@ -7,7 +7,14 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from glidefit.evidence import REASONS, SHORT, CleanRecording, Combined, TrackDiffusion
+from glidefit.evidence import (
+    REASONS,
+    SHORT,
+    BorrowedSpread,
+    CleanRecording,
+    Combined,
+    TrackDiffusion,
+)
 from glidefit.quantities import QUANTITIES
 from glidefit.results import (
     NAN,
@@ -211,29 +218,68 @@ def spread_by_level(combined: Combined, columns: Mapping[str, int]) -> tuple[Lev
     )
 
 
-def generalises(condition: str, combined: Combined, preparations: Sequence[str]) -> str:
-    """One sentence: to what the intervals generalise."""
+def generalises(
+    condition: str,
+    combined: Combined,
+    preparations: Sequence[str],
+    borrowed: Mapping[str, BorrowedSpread] | None = None,
+) -> str:
+    """A few sentences: to what the intervals generalise, and what they borrow for it."""
     days, n_chambers = combined.level_units["days"], combined.level_units["chambers"]
     few = ""
-    if (days if combined.covers == "days" else n_chambers) == 2:
+    if not borrowed and (days if combined.covers == "days" else n_chambers) == 2:
         few = " Two say little of their spread: a third would make the intervals far narrower."
+    loans = "".join(f" {text}" for text in _loans(condition, borrowed or {}, one_day=days == 1))
     if combined.covers == "days":
         named = {p for p in preparations if p}
         if len(named) == 1 and all(preparations):
             return (
                 f"The intervals cover other days with the same preparation ({named.pop()}): "
-                f"{days} days repeat the day, not the preparation.{few}"
+                f"{days} days repeat the day, not the preparation.{loans}{few}"
             )
-        return f"The intervals cover other days like these {days}.{few}"
+        return f"The intervals cover other days like these {days}.{loans}{few}"
     if combined.covers == "chambers":
+        if any(spread.covers == "days" for spread in (borrowed or {}).values()):
+            return (
+                f"The {n_chambers} chambers are of one day.{loans} All other intervals cover other "
+                "chambers of that day, not other days. Film on further days to do without what is "
+                "borrowed."
+            )
         return (
             f"The {n_chambers} chambers are of one day: the intervals cover other chambers of that "
-            f"day, not other days. Film on further days to say more.{few}"
+            f"day, not other days.{loans} Film on further days to say more.{few}"
         )
     return (
         "There is one chamber, so no interval can be given: how much another chamber would differ "
         "has not been seen. Film at least a second chamber, better a second day."
     )
+
+
+def _loans(condition: str, borrowed: Mapping[str, BorrowedSpread], *, one_day: bool) -> list[str]:
+    """What is borrowed from whom, for which quantities, and what that takes for granted."""
+    by_source: dict[tuple[str, tuple[str, ...]], list[str]] = {}
+    for key in QUANTITIES:
+        if key in borrowed:
+            loan = borrowed[key].covers, borrowed[key].sources
+            by_source.setdefault(loan, []).append(QUANTITIES[key].label)
+    out = []
+    for (covers, sources), labels in by_source.items():
+        what, whom = _listed(labels), _listed(sources)
+        if covers == "chambers":
+            out.append(f"How far chambers differ is pooled with {whom} for {what}.")
+        elif one_day:
+            out.append(
+                f"The intervals of {what} cover other days all the same: how far days differ is "
+                f"borrowed from {whom}. That holds if {condition} differs from day to day as "
+                f"{whom} does, which one day cannot show."
+            )
+        else:
+            out.append(f"How far days differ is borrowed from {whom} for {what}.")
+    return out
+
+
+def _listed(names: Sequence[str]) -> str:
+    return ", ".join(names[:-1]) + (" and " if len(names) > 1 else "") + names[-1]
 
 
 def model_checks(

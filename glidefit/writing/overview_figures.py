@@ -115,7 +115,9 @@ def _interval(ax: Axes, n: int, estimate: Estimate, *, control: bool) -> None:
     left, right = ax.get_xlim()
     colour = INK if control else HUES[0]
     if not math.isfinite(estimate.value):
-        ax.text(left, n, "no value", va="center", fontsize=FONT - 1)
+        limit = rounded(estimate.value, estimate.low, estimate.high).interval
+        text = "no value" if limit == "no interval" else limit
+        ax.text(left, n, text, va="center", fontsize=FONT - 1)
         return
     if math.isfinite(estimate.low) or math.isfinite(estimate.high):
         # NaN is an open end and compares as false.

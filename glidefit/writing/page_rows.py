@@ -17,6 +17,7 @@ from glidefit.results import (
     RecordingResult,
     SettingRow,
     TrackResult,
+    VariancePart,
 )
 from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
 from glidefit.writing.wording import counted, joined, named, sentence, visible
@@ -37,6 +38,7 @@ class EstimateRow:
     quantity: Quantity
     shown: Rounded
     interval: str  # "95 % interval: 0.77 to 0.83, over days"
+    method: str
     problem: str
     absent: bool  # the problem says why there is no value
 
@@ -69,6 +71,16 @@ class SpreadRow:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class VariationRow:
+    """How far one level differs, in one quantity."""
+
+    level: str
+    sd: str
+    interval: str
+    share: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ComparisonRow:
     """One comparison as a reader sees it."""
 
@@ -97,13 +109,15 @@ def _estimate(key: str, estimate: Estimate) -> EstimateRow:
     shown = rounded(estimate.value, estimate.low, estimate.high)
     interval = shown.interval
     if math.isfinite(estimate.low) or math.isfinite(estimate.high):
-        interval = f"{percent(estimate.level)} interval: {interval}"
+        kind = "limit" if estimate.method.startswith("one-sided") else "interval"
+        interval = f"{percent(estimate.level)} {kind}: {interval}"
         if estimate.covers:
             interval += f", over {visible(estimate.covers)}"
     return EstimateRow(
         quantity=QUANTITIES[key],
         shown=shown,
         interval=interval,
+        method=sentence(estimate.method),
         problem=sentence(estimate.problem),
         absent=shown.value == NONE,
     )
@@ -233,6 +247,39 @@ def _spread(item: LevelSpread, widest: float) -> SpreadRow:
         units=f"{item.units:,}",
         error=percent(item.relative_error),
         bar=bar,
+    )
+
+
+_VARIATION_LEVELS = {
+    "days": "days",
+    "day × condition": "of which in this condition's own way",
+    "chambers": "chambers of a day",
+    "filaments": "filaments, on a chamber's mean",
+}
+
+
+def variation_tables(
+    variation: Iterable[VariancePart],
+) -> tuple[tuple[str, str, tuple[VariationRow, ...]], ...]:
+    """For each quantity its label, the level of its intervals, and a row a level."""
+    by_quantity: dict[str, list[VariancePart]] = {}
+    for part in variation:
+        by_quantity.setdefault(part.quantity, []).append(part)
+    return tuple(
+        (
+            QUANTITIES[key].label if key in QUANTITIES else visible(key),
+            percent(parts[0].confidence),
+            tuple(
+                VariationRow(
+                    level=_VARIATION_LEVELS.get(part.level, visible(part.level)),
+                    sd=percent(part.relative_sd),
+                    interval=f"{percent(part.low).removesuffix(' %')} to {percent(part.high)}",
+                    share=percent(part.share),
+                )
+                for part in parts
+            ),
+        )
+        for key, parts in by_quantity.items()
     )
 
 

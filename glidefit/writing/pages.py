@@ -52,6 +52,7 @@ def condition_page(study: StudyResult, condition: ConditionResult) -> str:
         figures=figures,
         checks=page_rows.check_rows(condition.model_checks),
         spread=page_rows.spread_tables(condition.spread),
+        variation=page_rows.variation_tables(condition.variation),
         recordings=rows,
         own=page_rows.own_values(condition.tracks),
         troubled=sum(bool(row.problems) for row in rows),

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from numpy.testing import assert_allclose, assert_equal
 
-from glidefit.evidence import Combined
+from glidefit.evidence import BorrowedSpread, Combined
 from glidefit.pipeline.simulated import cleaned
 from glidefit.pipeline.study import study
 from glidefit.quantities import QUANTITIES
@@ -215,6 +215,49 @@ def test_to_what_the_intervals_generalise(covers, preparations, expected):
         level_units={"days": 3, "chambers": 4},
     )
     assert summarise.generalises("c", combined, preparations) == expected
+
+
+def loan(covers, *sources):
+    return BorrowedSpread(half_width=0.1, df=9, covers=covers, sources=sources, method="")
+
+
+@pytest.mark.parametrize(
+    ("days", "borrowed", "expected"),
+    [
+        (
+            2,
+            {"speed_um_s": loan("days", "w"), "motile_fraction": loan("days", "w")},
+            "The intervals cover other days like these 2. How far days differ is borrowed from w "
+            "for speed and motile fraction.",
+        ),
+        (
+            1,
+            {"speed_um_s": loan("chambers", "a", "b")},
+            "The 2 chambers are of one day: the intervals cover other chambers of that day, not "
+            "other days. How far chambers differ is pooled with a and b for speed. Film on further "
+            "days to say more.",
+        ),
+        (
+            1,
+            {"speed_um_s": loan("days", "w"), "motile_fraction": loan("chambers", "a")},
+            "The 2 chambers are of one day. The intervals of speed cover other days all the same: "
+            "how far days differ is borrowed from w. That holds if c differs from day to day as w "
+            "does, which one day cannot show. How far chambers differ is pooled with a for motile "
+            "fraction. All other intervals cover other chambers of that day, not other days. Film "
+            "on further days to do without what is borrowed.",
+        ),
+    ],
+)
+def test_what_is_borrowed_is_said(days, borrowed, expected):
+    combined = Combined(
+        value=np.zeros(1),
+        draws=np.zeros((2, 1)),
+        units=np.ones(1, dtype=int),
+        covers="days" if days > 1 else "chambers",
+        level_error={},
+        level_units={"days": days, "chambers": 2},
+    )
+    assert summarise.generalises("c", combined, [], borrowed) == expected
 
 
 def test_missing_estimates_are_filled_with_reasons():

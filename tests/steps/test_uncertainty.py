@@ -109,8 +109,12 @@ def test_rotational_diffusion_at_zero_is_not_resolved_and_opens_the_persistence_
     turning, length = found["rotational_diffusion_rad2_s"], found["persistence_length_um"]
     assert np.isnan(turning.value)
     assert turning.problem == "not resolved: the paths are straight within the noise"
-    assert turning.low == 0.0
-    assert turning.high > 0
+    assert np.isnan(turning.low)
+    # One-sided Student's t over three days, counted from 0; 2,000 resamples know it to 1.6 %.
+    error = np.std([-1e-3, 2e-3, -2e-3], ddof=1) / np.sqrt(3)
+    assert_allclose(turning.high, stats.t.ppf(0.95, 2) * error, rtol=4 / np.sqrt(2 * 2000))
+    assert turning.method.startswith("one-sided limit: Student's t with 2 degrees of freedom")
+    assert turning.covers == length.covers == "days"
     assert np.isnan(length.value)
     assert np.isnan(length.high)
     assert_allclose(length.low, 0.8 / turning.high, rtol=0.05)  # speed is the same everywhere
@@ -193,3 +197,98 @@ def test_band_of_a_curve_is_pointwise():
     value, low, high = band(combined(them), slice(0, 2), settings=SETTINGS)
     single = estimates(combined(them), COLUMNS, settings=SETTINGS)["speed_um_s"]
     assert_allclose([value[0], low[0], high[0]], [single.value, single.low, single.high])
+
+
+FRACTION = {"motile_fraction": 0, "ever_moved_fraction": 1}
+
+
+def counted(gliding, *, of=33):
+    """3 days × 2 chambers: filaments gliding in each, of so many; the same in both columns."""
+    return [
+        ChamberEvidence(
+            day=f"d{n // 2}",
+            chamber=f"c{n % 2}",
+            values=np.full(2, k / of),
+            influence=np.zeros((of, 2)),
+            recording_of_track=np.zeros(of, dtype=np.int64),
+            filaments=np.full(2, float(of)),
+        )
+        for n, k in enumerate(gliding)
+    ]
+
+
+def test_where_all_filaments_glide_a_limit_is_counted():
+    """Oracle: scipy.stats.betabinom, three days of 66 filaments with the correlation 0.1."""
+    found = estimates(combined(counted([33] * 6)), FRACTION, settings=SETTINGS)["motile_fraction"]
+    assert (found.value, found.covers, found.problem) == (1.0, "days", "")
+    assert np.isnan(found.high)
+    chance = stats.betabinom.pmf(66, 66, 9 * found.low, 9 * (1 - found.low)) ** 3
+    assert_allclose(chance, 0.05, rtol=1e-9)
+    assert "all of 198 filaments" in found.method
+    assert "assumed to be 0.1" in found.method
+
+
+def test_where_none_glides_the_limit_is_above_and_the_mirror_image():
+    every, none = (
+        estimates(combined(counted([k] * 6)), FRACTION, settings=SETTINGS)["motile_fraction"]
+        for k in (33, 0)
+    )
+    assert none.value == 0.0
+    assert np.isnan(none.low)
+    assert_allclose(none.high, 1 - every.low)
+
+
+def test_near_its_limit_the_interval_of_a_fraction_stays_inside():
+    near = combined(counted([33, 33, 33, 32, 33, 33]))
+    found = estimates(near, FRACTION, settings=SETTINGS)["motile_fraction"]
+    assert 0.8 < found.low < found.value < found.high < 1
+    assert found.method.endswith("near its limit, so from the effective count of filaments")
+    middle = estimates(combined(counted([15, 16, 17, 18, 16, 14])), FRACTION, settings=SETTINGS)
+    assert "limit" not in middle["motile_fraction"].method
+
+
+def test_one_chamber_where_all_glide_has_no_interval():
+    found = estimates(combined(counted([33])), FRACTION, settings=SETTINGS)["motile_fraction"]
+    assert found.value == 1.0
+    assert np.isnan([found.low, found.high]).all()
+
+
+@pytest.mark.parametrize(
+    ("turnings", "limited"),
+    [
+        ((0.0, 1e-3, 2e-3, 0.0, 1e-3, 1e-3), True),  # reaches 0, and two chambers are there
+        ((0.0, 9e-3, 8e-3, 8e-3, 9e-3, 8e-3), True),  # one of six does not tell it from 0
+        ((2e-3, 9e-3, 4e-3, 6e-3, 9e-3, 5e-3), False),  # few days, but every chamber tells
+    ],
+)
+def test_chambers_that_stop_at_zero_make_a_limit(turnings, limited):
+    """A likelihood knows no negative D_r: where chambers are at 0 their mean is too large."""
+    them = [chamber(f"d{n // 2}", f"c{n % 2}", (0.8, d)) for n, d in enumerate(turnings)]
+    found = estimates(combined(them), COLUMNS, settings=SETTINGS)
+    turning, length = found["rotational_diffusion_rad2_s"], found["persistence_length_um"]
+    assert np.isnan(turning.value) == limited
+    assert np.isnan(turning.low) == limited
+    assert np.isfinite(turning.high)
+    assert length.method.startswith("one-sided limit") == limited
+    if limited:
+        assert np.isnan([length.value, length.high]).all()
+        assert length.low > 0
+        assert turning.problem == "not resolved: the paths are straight within the noise"
+
+
+def test_where_all_chambers_stop_at_zero_the_mean_squared_displacement_gives_the_limit():
+    columns = {**COLUMNS, "msd_speed": 2, "msd_rotational_diffusion": 3}
+    them = [
+        chamber(f"d{n}", "1", (0.8, 0.0, 0.8, d), influence=np.zeros((2, 4)))
+        for n, d in enumerate((-1e-3, 2e-3, -2e-3))
+    ]
+    found = estimates(combined(them), columns, settings=SETTINGS)
+    turning = found["rotational_diffusion_rad2_s"]
+    assert turning.high > 1e-3
+    assert turning.method.startswith("one-sided limit of the mean squared displacement")
+    assert_allclose(found["persistence_length_um"].low, 0.8 / turning.high, rtol=0.01)
+    alone = estimates(
+        combined([chamber(f"d{d}", "1", (0.8, 0.0)) for d in range(3)]), COLUMNS, settings=SETTINGS
+    )["rotational_diffusion_rad2_s"]
+    assert np.isnan([alone.value, alone.low, alone.high]).all()
+    assert alone.problem

@@ -28,6 +28,7 @@ from glidefit.results import (
     StudyResult,
     TimePoint,
     TrackResult,
+    VariancePart,
 )
 from glidefit.writing.slugs import slugs
 
@@ -244,6 +245,24 @@ def make_condition(
                     ("tracks", len(tracks), 0.004 * factor),
                 )
             ),
+            variation=tuple(
+                VariancePart(
+                    quantity="speed_um_s",
+                    level=level,
+                    relative_sd=sd,
+                    low=low,
+                    high=high,
+                    confidence=0.95,
+                    df=df,
+                    share=share,
+                )
+                for level, sd, low, high, df, share in (
+                    ("days", 0.071, 0.0, 0.45, 2, 0.72),
+                    ("day × condition", 0.032, 0.0, 0.21, 2, 0.15),
+                    ("chambers", 0.038, 0.0, 0.14, 3, 0.21),
+                    ("filaments", 0.0222, 0.02, 0.0249, 162, 0.07),
+                )
+            ),
             generalises=GENERALISES,
             longest_lag_s=4.0,
             heading_diffusion_rad2_s=0.0498,
@@ -383,6 +402,7 @@ def empty(condition: ConditionResult) -> ConditionResult:
         drawn=(),
         time_points=(),
         spread=(),
+        variation=(),
         longest_lag_s=NAN,
         heading_diffusion_rad2_s=NAN,
     )
@@ -449,6 +469,7 @@ def hostile() -> StudyResult:
                 for key, e in c.estimates.items()
             },
             spread=tuple(replace(x, quantity=text, level=text) for x in c.spread),
+            variation=tuple(replace(x, quantity=text, level=text) for x in c.variation),
             problems=(text,),
             generalises=text,
             methods=text,

@@ -8,7 +8,7 @@ import math
 import pytest
 
 from glidefit.quantities import QUANTITIES
-from glidefit.results import LevelSpread
+from glidefit.results import Estimate, LevelSpread
 from glidefit.writing import page_rows
 from glidefit.writing.set_aside_rules import outcomes
 
@@ -152,3 +152,29 @@ def test_own_values_of_tracks_say_how_well_a_track_knows_them(study):
     assert "(a factor of 1.3 either way in the median)" in text
     assert "cannot tell" not in text
     assert page_rows.own_values([*own, kept[0]]).endswith(" 1 kept track cannot tell it.")
+
+
+def test_variation_has_a_row_a_level_with_its_interval(study):
+    ((label, level, rows),) = page_rows.variation_tables(study.conditions[0].variation)
+    assert (label, level) == ("speed", "95 %")
+    assert [row.level for row in rows] == [
+        "days",
+        "of which in this condition's own way",
+        "chambers of a day",
+        "filaments, on a chamber's mean",
+    ]
+    assert (rows[0].sd, rows[0].interval, rows[0].share) == ("7.1 %", "0 to 45 %", "72 %")
+
+
+def test_a_one_sided_limit_is_called_one(study):
+    condition = study.conditions[0]
+    limit = Estimate(low=120.0, covers="days", method="one-sided limit: Student's t")
+    estimates = {**condition.estimates, "persistence_length_um": limit}
+    rows = page_rows.main_estimates(dataclasses.replace(condition, estimates=estimates))
+    row = next(r for r in rows if r.quantity.key == "persistence_length_um")
+    assert row.interval == "95 % limit: at least 120, over days"
+    assert (row.shown.value, str(row.shown), row.method) == (
+        "–",
+        "at least 120",
+        "One-sided limit: Student's t.",
+    )
