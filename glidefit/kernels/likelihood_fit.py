@@ -16,6 +16,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "CIRCLING",
+    "PAUSING",
     "PARAMETERS",
     "STRAIGHT",
     "GlidingData",
@@ -31,7 +32,8 @@ Bools = NDArray[np.bool_]
 STRAIGHT = PARAMETERS[:5]
 CIRCLING = PARAMETERS[:7]
 _SIGNED = ("turning_rate",)
-_NEVER_ZERO = ("speed", "localization_variance")
+PAUSING = (*STRAIGHT, "stop_rate", "go_rate")
+_NEVER_ZERO = ("speed", "localization_variance", "stop_rate", "go_rate")
 
 # The climb ends when the next step promises less than this of the logarithm of the likelihood:
 # the optimum is then within 0.02 standard errors.
