@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,7 +47,17 @@ class GlidingData:
 
         They pause if there is a stop rate.
         """
-        pauses = {name: values[name] for name in ("stop_rate", "go_rate") if name in values}
+        return self._filtered(values, innovations=True)
+
+    def log_density(self, values: Mapping[str, float]) -> Floats:
+        """Only that of `filtered`, in less time."""
+        return self._filtered(values, innovations=False).log_density
+
+    def _filtered(self, values: Mapping[str, float], *, innovations: bool) -> FilteredTracks:
+        pauses: dict[str, Any] = {}
+        if "stop_rate" in values:
+            pauses = {name: values[name] for name in ("stop_rate", "go_rate")}
+            pauses["innovations"] = innovations
         return (filter_pausing_tracks if pauses else filter_tracks)(
             self.time_s,
             self.x,

@@ -126,7 +126,7 @@ class _Surface:
     def __call__(self, values: Floats) -> Floats:
         self.n_evaluations += 1
         named = dict(zip(self.names, map(float, values), strict=True))
-        return self.data.filtered(self.fixed | named).log_density
+        return self.data.log_density(self.fixed | named)
 
     def inside(self, values: Floats) -> Floats:
         """The values brought within their limits."""

@@ -131,24 +131,25 @@ def filter_pausing_tracks(
         log_density += np.log(total)
     # Where the filter has lost a track altogether, the position is impossible.
     log_density[~np.isfinite(log_density)] = -np.inf
-    mean, variance = _of_both(states)
+    mean, sd = _of_both(states)
     return FilteredTracks(
         log_likelihood=np.add.reduceat(log_density, offsets[:-1]) if m else np.empty(0),
         log_density=log_density,
         innovation=innovation,
+        heading_sd=sd[:, 2],
         speed_mean=mean[:, 3],
-        speed_sd=np.sqrt(np.maximum(variance[:, 0], 0.0)),
+        speed_sd=sd[:, 3],
         turning_rate_mean=mean[:, 4],
-        turning_rate_sd=np.sqrt(np.maximum(variance[:, 1], 0.0)),
+        turning_rate_sd=sd[:, 4],
     )
 
 
 def _of_both(states: Floats) -> tuple[Floats, Floats]:
-    """Means (m, 5) over both modes, and variances of speed and turning rate (m, 2)."""
+    """Means and standard deviations over both modes, (m, 5) each."""
     weight = states[:, :, -1:]
     mean = (weight * states[:, :, :5]).sum(axis=1)
-    spread = states[:, :, [17, 19]] + (states[:, :, 3:5] - mean[:, None, 3:]) ** 2
-    return mean, (weight * spread).sum(axis=1)
+    variance = states[:, :, [5, 10, 14, 17, 19]] + (states[:, :, :5] - mean[:, None]) ** 2
+    return mean, np.sqrt(np.maximum((weight * variance).sum(axis=1), 0.0))
 
 
 def first_clear(x: Floats, y: Floats, offsets: Ints) -> Ints:

@@ -106,8 +106,10 @@ def condition_numbers(
     motile = uncertainty.combine(gliding, settings=interval, rng=rng)
     known = uncertainty.estimates(combined, fitted.columns, settings=interval)
     known |= uncertainty.estimates(motile, motility.COLUMNS, settings=interval)
-    if fitted.model != "circling":
+    if "circling" not in fitted.model:
         del known["turning_rate_rad_s"]
+    if "pausing" not in fitted.model:
+        known = summarise.without_pauses(known, level=interval.level)
     given = settings.fit.known
     for name, key in (
         ("sideways_diffusion", "sideways_diffusion_um2_s"),
@@ -241,6 +243,7 @@ def _condition(
             method=fitted.method,
         ),
         model_checks=checks,
+        model_evidence=fitted.evidence,
     )
 
 
