@@ -48,9 +48,11 @@ _KNOWN: dict[str, tuple[str, Callable[[float], float]]] = {
     "speed_spread_um_s": ("speed_variance", _squared),
     "turning_rate_rad_s": ("turning_rate", _as_it_is),
     "turning_rate_spread_rad_s": ("turning_rate_variance", _squared),
+    "stop_rate_per_s": ("stop_rate", _as_it_is),
+    "go_rate_per_s": ("go_rate", _as_it_is),
 }
 _FREED = ("sideways_diffusion_um2_s", "further_error_along_um")
-_ABOVE_ZERO = ("speed_um_s", "localization_error_um")
+_ABOVE_ZERO = ("speed_um_s", "localization_error_um", "stop_rate_per_s", "go_rate_per_s")
 
 _NUMBER = r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?"
 _EQUAL = re.compile(rf"(\w+)\s*=\s*({_NUMBER}|free)")

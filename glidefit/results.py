@@ -209,6 +209,18 @@ class ModelCheck:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ModelEvidence:
+    """One number that spoke for or against a model when the model was chosen."""
+
+    model: str
+    name: str
+    value: float  # NaN where it was not needed
+    needed: float  # more than this speaks for the model
+    speaks_for: bool
+    meaning: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ConditionResult:
     """Everything about one condition."""
 
@@ -232,6 +244,7 @@ class ConditionResult:
     methods: str  # a paragraph to quote
     model_checks: tuple[ModelCheck, ...] = ()
     variation: tuple[VariancePart, ...] = ()
+    model_evidence: tuple[ModelEvidence, ...] = ()
 
     def __post_init__(self) -> None:
         if missing := QUANTITIES.keys() - self.estimates.keys():

@@ -100,10 +100,11 @@ class FitSettings(_Section):
         "",
         "What the numbers come from; the mean squared displacement stands beside the likelihood.",
     )
-    model: Literal["auto", "active", "circling"] = setting(
+    model: Literal["auto", "active", "circling", "pausing"] = setting(
         "auto",
         "",
-        "Whether paths turn steadily; chosen by practical size and at the level of chambers.",
+        "Whether paths turn steadily or filaments pause; chosen by practical size and at the level "
+        "of chambers.",
     )
     clock: Literal["per_path", "per_time"] = setting(
         "per_path",

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 __all__ = [
     "CIRCLING",
     "PARAMETERS",
+    "PAUSING",
     "STRAIGHT",
     "GlidingData",
     "LikelihoodFit",
@@ -31,7 +32,8 @@ Bools = NDArray[np.bool_]
 STRAIGHT = PARAMETERS[:5]
 CIRCLING = PARAMETERS[:7]
 _SIGNED = ("turning_rate",)
-_NEVER_ZERO = ("speed", "localization_variance")
+PAUSING = (*STRAIGHT, "stop_rate", "go_rate")
+_NEVER_ZERO = ("speed", "localization_variance", "stop_rate", "go_rate")
 
 # The climb ends when the next step promises less than this of the logarithm of the likelihood:
 # the optimum is then within 0.02 standard errors.
@@ -124,7 +126,7 @@ class _Surface:
     def __call__(self, values: Floats) -> Floats:
         self.n_evaluations += 1
         named = dict(zip(self.names, map(float, values), strict=True))
-        return self.data.filtered(self.fixed | named).log_density
+        return self.data.log_density(self.fixed | named)
 
     def inside(self, values: Floats) -> Floats:
         """The values brought within their limits."""

@@ -178,7 +178,7 @@ def with_borrowed(
 
 def _estimates(numbers: ConditionNumbers, *, settings: Settings) -> dict[str, Estimate]:
     """Without the quantities that the model does not have."""
-    from glidefit.steps import motility, uncertainty
+    from glidefit.steps import motility, summarise, uncertainty
 
     known: dict[str, Estimate] = {}
     for combined, columns in (
@@ -188,8 +188,10 @@ def _estimates(numbers: ConditionNumbers, *, settings: Settings) -> dict[str, Es
         known |= uncertainty.estimates(
             combined, columns, settings=settings.interval, borrowed=numbers.borrowed
         )
-    if numbers.fitted.model != "circling":
+    if "circling" not in numbers.fitted.model:
         del known["turning_rate_rad_s"]
+    if "pausing" not in numbers.fitted.model:
+        known = summarise.without_pauses(known, level=settings.interval.level)
     given = settings.fit.known
     for name, key in (
         ("sideways_diffusion", "sideways_diffusion_um2_s"),
@@ -336,6 +338,7 @@ def _condition(
             method=fitted.method,
         ),
         model_checks=checks,
+        model_evidence=fitted.evidence,
     )
 
 

@@ -31,9 +31,10 @@ from glidefit.results import (
 
 Floats = NDArray[np.float64]
 
+_NO_PAUSES = "not fitted: no pauses of a size that matters were seen"
 _NOT_IN_MODEL = {
-    "mean_speed_um_s": "not fitted: the active model knows no pauses",
-    "running_fraction": "not fitted: the active model knows no pauses",
+    "stop_rate_per_s": _NO_PAUSES,
+    "go_rate_per_s": _NO_PAUSES,
     "turning_rate_rad_s": "not fitted: no steady turning of a size that matters was seen",
     "sideways_diffusion_um2_s": "not fitted: a filament follows its path; a setting frees it",
     "further_error_along_um": "not fitted: taken as equal in all directions; a setting frees it",
@@ -69,6 +70,16 @@ def all_estimates(known: Mapping[str, Estimate], *, level: float) -> dict[str, E
     missing = {key: Estimate(level=level, problem=why) for key, why in _NOT_IN_MODEL.items()}
     nothing = Estimate(level=level, problem="no track was left to fit")
     return {key: known.get(key) or missing.get(key) or nothing for key in QUANTITIES}
+
+
+def without_pauses(known: Mapping[str, Estimate], *, level: float) -> dict[str, Estimate]:
+    """Estimates of a model without pauses: filaments always run."""
+    rates = ("stop_rate_per_s", "go_rate_per_s")
+    always = Estimate(
+        value=1.0, level=level, method="taken as 1: no pauses of a size that matters were seen"
+    )
+    kept = {key: estimate for key, estimate in known.items() if key not in rates}
+    return kept | {"mean_speed_um_s": known["speed_um_s"], "running_fraction": always}
 
 
 def smallest_speed(recordings: Sequence[CleanRecording], *, level: float) -> Estimate:
@@ -327,7 +338,7 @@ def model_checks(
             "and mixtures of filaments make it larger.",
         ),
     )
-    if model == "circling":  # which the fit to the MSD does not know
+    if model != "active":  # of which the fit to the MSD knows nothing
         return white
     return white + _second_opinion(combined, columns)
 
@@ -385,7 +396,7 @@ def problems(
     if model == "active":
         out += _headings_disagree(estimates, combined, columns)
     out += [
-        f"The active model does not describe these tracks: {check.name} {check.value:.3g}, "
+        f"The {model} model does not describe these tracks: {check.name} {check.value:.3g}, "
         f"expected {check.expected:g} within {check.tolerance:.2g}. {check.meaning} Look at the "
         "tracks before quoting the numbers."
         for check in checks

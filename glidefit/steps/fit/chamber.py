@@ -11,22 +11,24 @@ from numpy.typing import NDArray
 from glidefit.evidence import ChamberEvidence
 from glidefit.fit_parameters import FitParameters
 from glidefit.kernels import msd_fit
-from glidefit.kernels.active_brownian import circling_msd
+from glidefit.kernels.active_brownian import circling_msd, pausing_msd_frozen
 from glidefit.kernels.likelihood import Clock
 from glidefit.kernels.likelihood_fit import CIRCLING as CIRCLING_NAMES
+from glidefit.kernels.likelihood_fit import PAUSING as PAUSING_NAMES
 from glidefit.kernels.likelihood_fit import STRAIGHT
 from glidefit.kernels.msd_fit import LagCurve, MsdFit
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns
 from glidefit.steps.fit.intervals import Interval, Kept
 from glidefit.steps.fit.likelihood import ChamberLikelihood, fit_chamber_likelihood
-from glidefit.steps.fit.model_choice import CIRCLING, Turning
+from glidefit.steps.fit.model_choice import Turning
 from glidefit.steps.fit.track_speeds import frame_speed, lasting_variance, track_speed
 
 Floats = NDArray[np.float64]
 
 # Parameters that the likelihood has and the MSD has too, in this order, then the variance of speed.
 _MAIN = [COLUMN[name] for name in STRAIGHT]
-_CIRCLING = [COLUMN[name] for name in CIRCLING_NAMES]
+_CIRCLING = [COLUMN[name] for name in CIRCLING_NAMES[len(STRAIGHT) :]]
+_PAUSING = [COLUMN[name] for name in PAUSING_NAMES[len(STRAIGHT) :]]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -42,6 +44,7 @@ class ChamberFit:
         Kept tracks that are not what they seem and did not enter the likelihood.
     innovation : (k, 2) array
         Normalised innovations of the likelihood; empty without one.
+    likelihood : ChamberLikelihood or None
     problem : str
         Why the chamber could not be fitted.
     """
@@ -50,6 +53,7 @@ class ChamberFit:
     track_speeds: dict[str, tuple[Floats, Floats]]
     left_out: int
     innovation: Floats
+    likelihood: ChamberLikelihood | None
     problem: str
 
 
@@ -62,10 +66,11 @@ def fit_chamber(
     pooled: MsdFit,
     method: str,
     turning: Turning,
+    pauses: bool,
     known: FitParameters,
     clock: Clock,
 ) -> ChamberFit:
-    """Fit one chamber."""
+    """Fit one chamber, with a turning rate if the paths turn, with pauses if told so."""
     parts = [(c, i, i.of(members)) for c, i in zip(columns, intervals, strict=True)]
     parts = [(c, i, places) for c, i, places in parts if places]
     # Rows of the evidence follow the curves, interval by interval.
@@ -81,10 +86,8 @@ def fit_chamber(
         _set(values, influence, name, (from_msd.values[i], from_msd.influence[:, i]))
     own, left_out, problem = None, 0, from_msd.problem
     if method == "likelihood":
-        circles = turning.model == CIRCLING
-        names = (*(CIRCLING_NAMES if circles else STRAIGHT), *known.freed)
-        names += tuple(name for name in known.fixed if name not in names and name in COLUMN)
-        start = _likely_start(from_msd, pooled, lasting[0], turning if circles else None)
+        names = _names(turning, pauses, known)
+        start = _likely_start(from_msd, pooled, lasting[0], turning, pauses)
         own = fit_chamber_likelihood(ordered, names=names, start=start, known=known, clock=clock)
         there = [COLUMN[name] for name in names]
         values[there], influence[:, there] = own.values, own.influence
@@ -110,6 +113,7 @@ def fit_chamber(
         track_speeds=_track_speeds(ordered, own, longest_s, pooled.values),
         left_out=left_out,
         innovation=np.empty((0, 2)) if own is None else own.innovation,
+        likelihood=own,
         problem=f"{source.day}, chamber {source.chamber}: {problem}" if problem else "",
     )
 
@@ -121,8 +125,17 @@ def _start(pooled: MsdFit) -> dict[str, float] | None:
     return dict(zip(msd_fit.PARAMETERS, map(float, pooled.values), strict=True))
 
 
+def _names(turning: Turning, pauses: bool, known: FitParameters) -> tuple[str, ...]:
+    """Parameters of the likelihood; what is held joins them where the model has it."""
+    names = CIRCLING_NAMES if turning.steady else STRAIGHT
+    rates = PAUSING_NAMES[len(STRAIGHT) :]
+    names = (*names, *(rates if pauses else ()), *known.freed)
+    held = [name for name in known.fixed if name not in (*names, *rates) and name in COLUMN]
+    return (*names, *held)
+
+
 def _likely_start(
-    own: MsdFit, pooled: MsdFit, variance: float, turning: Turning | None
+    own: MsdFit, pooled: MsdFit, variance: float, turning: Turning, pauses: bool
 ) -> dict[str, float] | None:
     """First guess of the likelihood, inside its limits; None where the MSD knows nothing."""
     known = own if not own.problem else pooled
@@ -130,13 +143,15 @@ def _likely_start(
         return None
     speed, bend, along, noise = map(float, known.values)
     circling = {}
-    if turning is not None:
+    if turning.steady:
         # Circles look like diffusion to the MSD: most of its D_r is theirs.
         bend = 0.2 * abs(bend)
         circling = {
             "turning_rate": turning.rate,
             "turning_rate_variance": max(turning.variance, 0.01 * turning.rate**2),
         }
+    if pauses:  # of which the MSD knows nothing
+        return circling
     return circling | {
         "speed": speed,
         "rotational_diffusion": max(bend, 0.1 * abs(bend)),
@@ -197,12 +212,12 @@ def _fill_msd(
     """Measured MSD, and that of the fitted parameters."""
     values[columns.msd] = curve.value
     influence[rows, columns.msd] = np.nan_to_num(curve.influence * curve.value)
-    names = _CIRCLING if np.isfinite(values[_CIRCLING]).all() else _MAIN
+    names = _MAIN + [place for place in (*_CIRCLING, *_PAUSING) if np.isfinite(values[place])]
     fitted = values[names]
     if not np.all(np.isfinite(fitted)):
         return
-    values[columns.model] = _predicted(curve, fitted)
-    influence[:, columns.model] = influence[:, names] @ _slope(curve, fitted)
+    values[columns.model] = _predicted(curve, names, fitted)
+    influence[:, columns.model] = influence[:, names] @ _slope(curve, names, fitted)
     # Filaments of which a person says so also diffuse sideways, or err more along their heading.
     sideways = 2 * (curve.lag_s - curve.exposure_s / 3)
     for name, slope in (("sideways_diffusion", sideways), ("error_variance_along", 2.0)):
@@ -211,18 +226,49 @@ def _fill_msd(
             influence[:, columns.model] += influence[:, [COLUMN[name]]] * slope
 
 
-def _predicted(curve: LagCurve, fitted: Floats) -> Floats:
-    """MSD of the fitted parameters, 5 of active or 7 of circling paths.
+def _predicted(curve: LagCurve, names: Sequence[int], fitted: Floats) -> Floats:
+    """MSD of the fitted parameters, those of active, circling or pausing paths.
 
     It knows the mean square of the speed, mean squared plus variance, and averages over the
     turning rates of the population.
     """
     speed, *others, variance = map(float, fitted[: len(_MAIN)])
     named = dict(zip(msd_fit.PARAMETERS, [_root(speed**2 + variance), *others], strict=True))
-    straight = msd_fit.model_values(curve, named)
-    if len(fitted) == len(_MAIN):
-        return straight
-    return straight + _circling(curve, named, rate=fitted[5], spread=_root(fitted[6]))
+    of = dict(zip(names, map(float, fitted), strict=True))
+    stop, go = (of.get(place, 0.0) for place in _PAUSING)
+    if stop > 0:
+        msd = _pausing(curve, named, stop_rate=stop, go_rate=go)
+    else:
+        msd = msd_fit.model_values(curve, named)
+    if _CIRCLING[0] in of:
+        rate, spread = of[_CIRCLING[0]], _root(of[_CIRCLING[1]])
+        msd = msd + _circling(curve, named, rate=rate, spread=spread)
+    return msd
+
+
+def _pausing(
+    curve: LagCurve, named: dict[str, float], *, stop_rate: float, go_rate: float
+) -> Floats:
+    """MSD of filaments that pause, with headings frozen in the pauses.
+
+    The mean positions of two exposures differ as two instants do, averaged over how far apart
+    the instants are, less what the instants of one exposure differ.
+    """
+    path = {name: named[name] for name in ("speed", "rotational_diffusion")}
+    running = go_rate / (stop_rate + go_rate)
+
+    def instants(lag: Floats) -> Floats:
+        diffused = 2 * named["longitudinal_diffusion"] * running * lag
+        return diffused + pausing_msd_frozen(lag, stop_rate=stop_rate, go_rate=go_rate, **path)
+
+    lag, exposure = curve.lag_s, curve.exposure_s
+    msd = instants(lag)
+    if exposure > 0:
+        node, weight = np.polynomial.legendre.leggauss(8)
+        node, weight = (node + 1) / 2 * exposure, weight * (1 - (node + 1) / 2)
+        apart = instants(lag[:, None] + node) + instants(np.abs(lag[:, None] - node))
+        msd = (0.5 * apart - instants(node)) @ weight
+    return np.asarray(msd + 4 * named["localization_variance"])
 
 
 def _circling(curve: LagCurve, named: dict[str, float], *, rate: float, spread: float) -> Floats:
@@ -240,15 +286,14 @@ def _root(square: float) -> float:
     return float(np.sqrt(max(square, 0.0)))
 
 
-def _slope(curve: LagCurve, fitted: Floats) -> Floats:
+def _slope(curve: LagCurve, names: Sequence[int], fitted: Floats) -> Floats:
     """Derivative of the predicted MSD by each parameter, (p, l)."""
     slope = []
     for i, value in enumerate(fitted):
         step = np.zeros(len(fitted))
         step[i] = 1e-5 * max(abs(value), 1e-9)
-        slope.append(
-            (_predicted(curve, fitted + step) - _predicted(curve, fitted - step)) / 2 / step[i]
-        )
+        above, below = (_predicted(curve, names, fitted + sign * step) for sign in (1, -1))
+        slope.append((above - below) / 2 / step[i])
     return np.array(slope)
 
 

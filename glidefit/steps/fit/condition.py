@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -10,11 +10,20 @@ from numpy.typing import NDArray
 
 from glidefit.evidence import ChamberEvidence, CleanRecording
 from glidefit.kernels import msd_fit
+from glidefit.results import ModelEvidence
 from glidefit.settings import FitSettings
-from glidefit.steps.fit.chamber import fit_chamber
+from glidefit.steps.fit.chamber import ChamberFit, fit_chamber
 from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns, curve_columns
 from glidefit.steps.fit.intervals import FEWEST_FRAMES, Interval, Kept, intervals
-from glidefit.steps.fit.model_choice import NO_TURNING, Turning, look_for_turning
+from glidefit.steps.fit.model_choice import (
+    CIRCLING,
+    NO_TURNING,
+    PAUSING,
+    Pauses,
+    Turning,
+    compare_pauses,
+    look_for_turning,
+)
 
 Floats = NDArray[np.float64]
 
@@ -46,9 +55,10 @@ class ConditionFit:
     pooled : (4,) array
         Parameters of all tracks in one pot, for reading speeds off single lags.
     model : str
-        "active" or "circling".
+        "active", "circling", "pausing" or "circling and pausing".
     turning : Turning
-        The evidence from which the model was chosen.
+    evidence : tuple of ModelEvidence
+        From which the model was chosen.
     problems : tuple of str
     """
 
@@ -63,6 +73,7 @@ class ConditionFit:
     pooled: Floats
     model: str
     turning: Turning
+    evidence: tuple[ModelEvidence, ...]
     problems: tuple[str, ...]
 
 
@@ -83,20 +94,26 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
     for one in kept:
         chambers.setdefault((one.source.day, one.source.chamber), []).append(one)
     turning = _turning(list(chambers.values()), pooled, settings)
-    results = [
-        fit_chamber(
-            members,
-            parts,
-            columns,
-            longest_s=longest,
-            pooled=pooled,
-            method=settings.method,
-            turning=turning,
-            known=settings.known,
-            clock=settings.clock,
-        )
-        for members in chambers.values()
-    ]
+    members = list(chambers.values())
+
+    def fitted(pauses: bool) -> list[ChamberFit]:
+        return [
+            fit_chamber(
+                own,
+                parts,
+                columns,
+                longest_s=longest,
+                pooled=pooled,
+                method=settings.method,
+                turning=turning,
+                pauses=pauses,
+                known=settings.known,
+                clock=settings.clock,
+            )
+            for own in members
+        ]
+
+    results, pauses = _with_or_without_pauses(fitted, settings)
     variance = _speed_variance([result.evidence for result in results])
     corrected = ["msd_speed"] if settings.method == "likelihood" else ["msd_speed", "speed"]
     speeds: dict[str, tuple[Floats, Floats]] = {}
@@ -112,10 +129,44 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         method=settings.method,
         longest_lag_s=longest,
         pooled=pooled.values,
-        model=turning.model,
+        model=_model(turning, pauses),
         turning=turning,
+        evidence=() if settings.method == "msd" else (*turning.evidence, *pauses.evidence),
         problems=tuple(result.problem for result in results if result.problem),
     )
+
+
+def _with_or_without_pauses(
+    fitted: Callable[[bool], list[ChamberFit]], settings: FitSettings
+) -> tuple[list[ChamberFit], Pauses]:
+    """The chambers fitted by the model that is chosen."""
+    if settings.method == "msd":
+        return fitted(False), Pauses(promise=-np.inf)
+    forced = "" if settings.model == "auto" else settings.model
+    if forced == PAUSING:
+        return fitted(True), Pauses(promise=np.nan, forced=forced)
+    without = fitted(False)
+    likely = [one.likelihood for one in without if one.likelihood is not None]
+    promise = 1000 * float(np.mean([one.promise for one in likely]))
+    pauses = Pauses(promise=promise, forced=forced)
+    if not pauses.promising:
+        return without, pauses
+    results = fitted(True)
+    rates = np.array([r.evidence.values[[COLUMN["stop_rate"], COLUMN["go_rate"]]] for r in results])
+    pauses = compare_pauses(
+        promise,
+        [one.log_likelihood for one in likely],
+        [one.likelihood.log_likelihood for one in results if one.likelihood is not None],
+        rates[:, 0] / rates.sum(axis=1),
+    )
+    return (results if pauses.seen else without), pauses
+
+
+def _model(turning: Turning, pauses: Pauses) -> str:
+    """In words."""
+    if not pauses.seen:
+        return turning.model
+    return f"{CIRCLING} and {PAUSING}" if turning.steady else PAUSING
 
 
 def _turning(

@@ -25,6 +25,8 @@ SCALARS = (
     "turning_rate_variance",
     "sideways_diffusion",  # where a person frees it
     "error_variance_along",
+    "stop_rate",  # of pausing filaments
+    "go_rate",
 )
 COLUMN = {name: i for i, name in enumerate(SCALARS)}
 

@@ -13,6 +13,7 @@ from glidefit.fit_parameters import FitParameters
 from glidefit.kernels.gliding_data import GlidingData, first_guess
 from glidefit.kernels.likelihood import Clock
 from glidefit.kernels.likelihood_fit import LikelihoodFit, fit_parameters
+from glidefit.kernels.pausing_guess import pausing_guess
 from glidefit.steps.fit.intervals import Kept
 
 if TYPE_CHECKING:
@@ -33,6 +34,11 @@ _N_FIRST = 8
 # what comes out is hardly drawn towards the others.
 _WIDE = 0.5
 _ROUNDS = 5
+# Pauses much shorter than a frame cannot be told from longitudinal diffusion.
+_SHORTEST_PAUSE_FRAMES = 0.5
+# What pauses promise is tried with this share of the time paused, in pauses of so many frames, on
+# so many positions.
+_TRIED_SHARE, _TRIED_FRAMES, _TRIED_POSITIONS = 0.03, (3.0, 15.0), 8000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -51,6 +57,10 @@ class ChamberLikelihood:
         False for tracks that are not what they seem.
     innovation : (k, 2) array
         Normalised innovations of the tracks used, NaN at the start of each track.
+    log_likelihood : (m,) array
+        Of each track at the optimum; NaN for tracks left out.
+    promise : float
+        Log likelihood that a few pauses add or cost, by position; NaN where pauses are fitted.
     problem : str
     """
 
@@ -60,6 +70,8 @@ class ChamberLikelihood:
     speed_error: Floats
     used: Bools
     innovation: Floats
+    log_likelihood: Floats
+    promise: float
     problem: str
 
 
@@ -108,7 +120,7 @@ def _averaged(
     width = len(next(iter(parts.values())).values)
     values, influence = np.zeros(width), np.zeros((n, width))
     speed, error = np.full(n, np.nan), np.full(n, np.nan)
-    used = np.zeros(n, dtype=bool)
+    used, likely, promise = np.zeros(n, dtype=bool), np.full(n, np.nan), 0.0
     total = sum(len(one.tracks.frame) for one in members)
     for places, part in parts.items():
         rows = np.concatenate([np.arange(first[i], first[i + 1]) for i in places])
@@ -116,6 +128,8 @@ def _averaged(
         values += share * part.values
         influence[rows] = share * part.influence
         speed[rows], error[rows], used[rows] = part.speed, part.speed_error, part.used
+        likely[rows] = part.log_likelihood
+        promise += share * part.promise
     return ChamberLikelihood(
         values=values,
         influence=influence,
@@ -123,6 +137,8 @@ def _averaged(
         speed_error=error,
         used=used,
         innovation=np.concatenate([part.innovation for part in parts.values()]),
+        log_likelihood=likely,
+        promise=promise,
         problem="; ".join(part.problem for part in parts.values() if part.problem),
     )
 
@@ -137,7 +153,14 @@ def _fit_group(
     counts = np.concatenate([one.tracks.n_positions for one in members])
     judged = counts >= 2
     every = _data(members, judged, clock)
-    guess = first_guess(every) | dict(start or {}) | known.fixed
+    if "stop_rate" in names:
+        most = 1 / (_SHORTEST_PAUSE_FRAMES * members[0].source.frame_s)
+        limits = dict.fromkeys(("stop_rate", "go_rate"), (0.0, most))
+        known = replace(known, limits=limits | known.limits)
+        guess = pausing_guess(every)
+    else:
+        guess = first_guess(every)
+    guess = guess | dict(start or {}) | known.fixed
     start = {name: guess[name] for name in names}
     used = np.zeros(len(counts), dtype=bool)
     for _ in range(_ROUNDS):
@@ -252,6 +275,8 @@ def _with_mean_over_frames(
         values[0] = float(weight @ np.where(tells, own, 0.0) / weight.sum())
         influence[used, 0] = weight * (np.where(tells, own, 0.0) - values[0]) / weight.sum()
     speed, speed_error = np.full(len(counts), np.nan), np.full(len(counts), np.nan)
+    likely = np.full(len(counts), np.nan)
+    likely[used] = fit.log_likelihood
     speed[used], speed_error[used] = np.where(tells, own, np.nan), np.where(tells, error, np.nan)
     return ChamberLikelihood(
         values=values,
@@ -260,8 +285,25 @@ def _with_mean_over_frames(
         speed_error=speed_error,
         used=used,
         innovation=data.filtered(named).innovation,
+        log_likelihood=likely,
+        promise=_promise(data, named),
         problem="",
     )
+
+
+def _promise(data: GlidingData, named: Mapping[str, float]) -> float:
+    """Log likelihood by position that a few pauses would add, the other parameters as they are."""
+    if "stop_rate" in named:
+        return float("nan")
+    some = data.some(_TRIED_POSITIONS)
+    track_waits = np.delete(np.diff(some.time_s), some.offsets[1:-1] - 1)
+    frame_s = float(np.median(track_waits))
+    gains = []
+    for frames in _TRIED_FRAMES:
+        go = 1 / (frames * frame_s)
+        rates = {"stop_rate": go * _TRIED_SHARE / (1 - _TRIED_SHARE), "go_rate": go}
+        gains.append(float(some.log_density({**named, **rates}).mean()))
+    return max(gains) - float(some.log_density(named).mean())
 
 
 def _own_speed(mean: Floats, sd: Floats, population: float) -> tuple[Floats, Floats]:
@@ -284,5 +326,7 @@ def _failed(n_tracks: int, n_names: int, problem: str) -> ChamberLikelihood:
         speed_error=none,
         used=np.zeros(n_tracks, dtype=bool),
         innovation=np.empty((0, 2)),
+        log_likelihood=none,
+        promise=float("nan"),
         problem=problem,
     )

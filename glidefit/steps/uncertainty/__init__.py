@@ -174,6 +174,19 @@ RULES = {
         beside=("speed", 2.0),
     ),
     "turning_rate_rad_s": _Rule(columns=("turning_rate",), scale=lambda w: w),
+    "mean_speed_um_s": _Rule(
+        columns=("speed", "stop_rate", "go_rate"),
+        scale=lambda v, stop, go: v * go / (stop + go),
+        below=0.0,
+    ),
+    "running_fraction": _Rule(
+        columns=("stop_rate", "go_rate"),
+        scale=lambda stop, go: go / (stop + go),
+        below=0.0,
+        beyond=1.0,
+    ),
+    "stop_rate_per_s": _Rule(columns=("stop_rate",), scale=lambda rate: rate, below=0.0),
+    "go_rate_per_s": _Rule(columns=("go_rate",), scale=lambda rate: rate, below=0.0),
     "sideways_diffusion_um2_s": _Rule(
         columns=("sideways_diffusion",), scale=lambda d: d, below=0.0, unresolved=_NOISE
     ),
