@@ -194,7 +194,7 @@ def _compared(bounds: Sequence[AgainstBound]) -> str:
 
 
 def _fine(share: float) -> str:
-    return NONE if math.isnan(share) else f"{100 * share:.2g} %"
+    return NONE if math.isnan(share) else f"{significant(100 * share, digits=2)} %"
 
 
 def _times(value: float, error: float) -> str:
