@@ -83,7 +83,7 @@ def show(case: Case) -> None:
     if case.reach:
         print(f"  to reach:     {case.reach}")
     if case.spots:
-        print(f"  theory:       {1e3 * np.sqrt(2) * theory_um(case):.0f} nm")
+        print(f"  theory:       {1e3 * theory_um(film.truth, case):.1f} nm")
 
 
 class CountedImages:
@@ -104,12 +104,29 @@ class CountedImages:
             yield image
 
 
-def theory_um(case: Case) -> float:
-    """Least localization error of a coordinate, at the first frame."""
-    optics = SpotOptics.with_signal_to_noise(
+def theory_um(truth: FilmTruth, case: Case) -> float:
+    """Least error of a spot's distance from its true place: root mean square over what counts.
+
+    Each spot with the light that bleaching, uneven illumination and focus leave it.
+    """
+    p, faults = truth.positions, case.faults
+    first = SpotOptics.with_signal_to_noise(
         case.signal_to_noise, psf_um=0.13, pixel_um=PIXEL_UM, background_photons=20, read_noise=1.6
     )
-    return least_localization_error(optics)
+    squares = []
+    for frame, x, y in zip(p.frame[p.counted], p.x[p.counted], p.y[p.counted], strict=True):
+        time_s = frame * case.frame_s
+        off_centre = (2 * np.array([x, y]) / case.field_um[0] - 1) ** 2
+        light = 1 - faults.unevenness * off_centre.sum() / 2
+        swing = np.sin(np.pi * time_s / faults.focus_period_s) ** 2
+        here = dataclasses.replace(
+            first,
+            psf_um=first.psf_um * (1 + faults.focus_breathing * swing),
+            photons=first.photons * light * np.exp(-faults.bleaching_rate * time_s),
+            background_photons=first.background_photons * light,
+        )
+        squares.append(2 * least_localization_error(here) ** 2)
+    return float(np.sqrt(np.mean(squares)))
 
 
 def line(found: Followed | None, film: Film, case: Case, used_s: float) -> str:

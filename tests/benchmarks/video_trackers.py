@@ -69,14 +69,12 @@ def blobs_of(image: NDArray[np.uint16], *, least_px: int = 30) -> tuple[Floats, 
     from scipy import ndimage
 
     smooth = ndimage.gaussian_filter(image.astype(float), 1.0)
-    label, _ = ndimage.label(smooth > triangle_threshold(smooth), structure=np.ones((3, 3)))
-    size = np.bincount(label.ravel())
-    large = np.flatnonzero(size[1:] >= least_px) + 1
-    row, column = np.indices(image.shape)
-    x, y = (
-        np.bincount(label.ravel(), weights=a.ravel())[large] / size[large] for a in (column, row)
-    )
-    return x, y
+    mask = smooth > triangle_threshold(smooth)
+    label, n = ndimage.label(mask, structure=np.ones((3, 3)))
+    size = ndimage.sum_labels(mask, label, np.arange(1, n + 1))
+    large = np.flatnonzero(size >= least_px) + 1
+    row, column = np.array(ndimage.center_of_mass(mask, label, large)).reshape(-1, 2).T
+    return column, row
 
 
 def triangle_threshold(image: Floats) -> float:
@@ -107,7 +105,7 @@ def frame_to_frame_speeds(
 ) -> dict[int, float]:
     """Mean displacement from frame to frame over the time between; rows by track, then frame."""
     same = np.diff(track) == 0
-    speed = np.hypot(np.diff(x), np.diff(y)) / (np.diff(frame) * frame_s + ~same)
+    speed = np.hypot(np.diff(x), np.diff(y)) / (np.where(same, np.diff(frame), 1) * frame_s)
     return {
         int(t): float(speed[same & (track[1:] == t)].mean()) for t in np.unique(track[1:][same])
     }
