@@ -302,6 +302,7 @@ def _condition(
         checks=checks,
         model=fitted.model,
         left_out=fitted.left_out,
+        heading_sd=_heading_sd(recordings, combined, fitted.columns),
         kept=counted.tracks_kept,
     )
     return ConditionResult(
@@ -339,6 +340,26 @@ def _condition(
         ),
         model_checks=checks,
         model_evidence=fitted.evidence,
+    )
+
+
+def _heading_sd(
+    recordings: Sequence[CleanRecording], combined: Combined, columns: Mapping[str, int]
+) -> float:
+    """How vaguely the positions tell the heading, in rad; 0 where the values do not say."""
+    from glidefit.kernels.likelihood import heading_uncertainty
+
+    speed, diffusion, variance = (
+        float(combined.value[columns[name]])
+        for name in ("speed", "rotational_diffusion", "localization_variance")
+    )
+    if not (speed > 0 and diffusion > 0 and variance > 0):
+        return 0.0
+    return heading_uncertainty(
+        speed=speed,
+        rotational_diffusion=diffusion,
+        localization_error=float(np.sqrt(variance)),
+        frame_s=float(np.median([r.frame_s for r in recordings])),
     )
 
 

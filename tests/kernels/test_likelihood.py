@@ -10,7 +10,7 @@ from scipy import stats
 
 from glidefit.kernels.bound import exposed_wiener
 from glidefit.kernels.gliding_data import GlidingData
-from glidefit.kernels.likelihood import filter_tracks
+from glidefit.kernels.likelihood import filter_tracks, heading_uncertainty
 from glidefit.kernels.likelihood_fit import CIRCLING, STRAIGHT, fit_likelihood, fit_parameters
 from glidefit.steps.simulate import ScenarioCondition, clean_tracks
 
@@ -290,6 +290,17 @@ def test_speeds_and_turning_rates_of_tracks_lie_within_their_errors():
         pull = (truth - mean) / sd
         assert abs(pull.mean()) < 4 / np.sqrt(300)
         assert abs(pull.std() - 1) < 4 / np.sqrt(600)
+
+
+@pytest.mark.parametrize("error", [0.03, 0.13])
+def test_steady_heading_is_known_as_a_filter_in_continuous_time_knows_it(error):
+    motion = KINESIN | {"localization_error": error, "longitudinal_diffusion": 0.0}
+    tracks = simulated(20, 100, seed=2, motion=motion)
+    measured = np.median(filter_tracks(*columns(tracks), **motion).heading_sd)
+    known = {k: v for k, v in motion.items() if k != "longitudinal_diffusion"}
+    expected = heading_uncertainty(frame_s=1 / 3, **known)
+    # Frames are not continuous time: up to a fifth less, as the formula says.
+    assert 0.8 * expected < measured < 1.02 * expected
 
 
 # -- the fit --------------------------------------------------------------------------------------

@@ -130,7 +130,7 @@ def one_sided_curve(factor):
     )
 
 
-def told(factor=1.0, *, heading=0.008, undecided=0):
+def told(factor=1.0, *, heading=0.008, undecided=0, heading_sd=0.0):
     """Problems of a condition whose D_r is 0.008 from the MSD in each of three days."""
     draws = np.tile([0.008, heading], (10, 1)) + np.linspace(-1e-5, 1e-5, 10)[:, None] * [1, -1]
     combined = Combined(
@@ -148,7 +148,14 @@ def told(factor=1.0, *, heading=0.008, undecided=0):
         msd=[one_sided_curve(factor)],
         fit_problems=[],
         undecided=undecided,
+        heading_sd=heading_sd,
     )
+
+
+def test_a_heading_that_is_hardly_known_is_a_problem():
+    assert told(1.0, heading_sd=0.24) == []
+    (found,) = told(1.0, heading_sd=0.28)
+    assert found.startswith("From frame to frame the heading is known to ±0.28 rad only")
 
 
 def test_a_fit_that_misses_its_points_is_a_problem():
