@@ -95,6 +95,7 @@ class TrackResult:
     path_um: float
     speed_um_s: float  # NaN if the track is too short to tell
     speed_error_um_s: float = NAN  # standard error of the track's own speed
+    gliding_probability: float = NAN  # that it glides rather than rests, pivots or floats
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

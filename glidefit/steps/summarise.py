@@ -36,6 +36,8 @@ _SPREAD_OF = {
     "rotational_diffusion_rad2_s": "rotational_diffusion",
     "motile_fraction": "motile_fraction",
 }
+# Of the kept tracks, so many may be undecided before it is a problem.
+_FEW_UNDECIDED = 0.02
 
 
 def counts(recordings: Sequence[CleanRecording]) -> Counts:
@@ -148,6 +150,7 @@ def tracks(
                 path_um=_short(speed[k] * duration[k]),
                 speed_um_s=_short(speed[k]),
                 speed_error_um_s=_short(error[k]),
+                gliding_probability=_short(r.clean.gliding_probability[k]),
             )
             for k in range(t.n_tracks)
         ]
@@ -338,10 +341,10 @@ def problems(
             f"{left_out} of {kept} kept tracks are so unlike the others that they did not enter "
             "the likelihood. Look at them: floating filaments, or two joined to one track?"
         )
-    if undecided:
+    if undecided > _FEW_UNDECIDED * kept:
         out.append(
-            f"{undecided} {'track is' if undecided == 1 else 'tracks are'} too short to tell "
-            "gliding from rest: kept for the fit, left out of the motile fraction."
+            f"{undecided} {'track says' if undecided == 1 else 'tracks say'} too little of whether "
+            "they glide: they are left out of the motile fraction (clean.odds)."
         )
     return out
 
