@@ -31,7 +31,9 @@ class CleanTracks:
     reason : (m,) array of str
         "" for a kept track, else why it was set aside.
     decided : (m,) array of bool
-        False for a kept track that is too short to tell gliding from rest.
+        False for a track that says too little of whether it glides.
+    gliding_probability : (m,) array
+        By likelihood; NaN for a track that is no track or jumps.
     noise_um : float
         Localization error measured on the tracks, per coordinate.
     typical_speed_um_s : float
@@ -46,6 +48,7 @@ class CleanTracks:
     tracks: Tracks
     reason: NDArray[np.str_]
     decided: Bools
+    gliding_probability: Floats
     noise_um: float
     typical_speed_um_s: float
     smallest_speed_um_s: float

@@ -101,6 +101,7 @@ class TrackResult:
     rotational_diffusion_low_rad2_s: float = NAN
     rotational_diffusion_high_rad2_s: float = NAN
     rotational_diffusion_problem: str = ""  # why a kept track has none
+    gliding_probability: float = NAN  # that it glides rather than rests, pivots or floats
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -71,12 +71,11 @@ class CleanSettings(_Section):
     stuck: float = setting(
         2.0, "× noise", "A track that strays no farther than this from its mean is stuck.", ge=1
     )
-    advance: float = setting(
-        0.4,
-        "",
-        "Mean cosine between successive displacements below which a track makes no net advance.",
-        gt=0,
-        lt=1,
+    odds: float = setting(
+        3.0,
+        ": 1",
+        "Odds from which it is told whether a track glides; others do not count as motile or not.",
+        ge=1,
     )
     pivot_extent: float = setting(
         5.0, "µm", "Largest extent of a filament that pivots in place.", gt=0

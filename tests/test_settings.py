@@ -192,11 +192,11 @@ def test_a_wrong_option_is_called_as_it_was_typed():
 
 def test_everything_wrong_is_said_at_once():
     file = {"link": {"max_sped": 3, "max_gap": -1}, "interval": {"level": 1}}
-    found = problems(file=file, options={"clean.advance": 1})
+    found = problems(file=file, options={"clean.odds": 0.5})
     assert [line.split(": ")[0] for line in found] == [
         "s.toml",
         "s.toml, link.max_gap",
-        "option --clean-advance",
+        "option --clean-odds",
         "s.toml, interval.level",
     ]
 

@@ -20,6 +20,8 @@ _CLEAR_SQUARE = 20.0
 _FALSE_MOTION = 1e-4
 # A path that is this many times longer than the extent it stays in goes round in place.
 _IN_PLACE_RATIO = 6.0
+# Mean cosine between successive displacements from which a track makes a net advance.
+_ADVANCE = 0.4
 # MSD growth below this exponent is bounded; free diffusion has 1.
 _BOUNDED_EXPONENT = 0.5
 
@@ -208,21 +210,7 @@ def in_place(motion: Motion, n_frames: Ints, *, extent: float) -> Bools:
     return np.asarray(inside & bounded & (motion.lag > 0))
 
 
-def smallest_noticed_speed(
-    n_positions: Floats, duration: Floats, *, noise: float, multiple: float
-) -> Floats:
-    """Slowest straight motion whose spread leaves the limit of rest, in µm/s.
-
-    A straight path of length L, evenly visited, has a spread of L/√24 per coordinate.
-
-    Parameters
-    ----------
-    n_positions, duration : arrays
-        Positions and duration in s of a track.
-    noise : float
-        Localization error in µm.
-    multiple : float
-        As in `spread_limit`.
-    """
-    limit = spread_limit(np.asarray(n_positions, dtype=np.int64), multiple=multiple)
-    return np.asarray(np.sqrt(24.0) * limit * noise / duration)
+def advancing(motion: Motion) -> Bools:
+    """True for tracks that make a net advance, as a first look says, or are too short for it."""
+    # Where no pair of displacements exists, nothing speaks against an advance.
+    return np.asarray((motion.lag > 0) & ~(motion.advance < _ADVANCE))

@@ -150,7 +150,7 @@ def _look_at_video(task: Task) -> Look:
         noise = motion.common_noise(each, t.n_positions)
     if np.isfinite(noise):
         measured = motion.measure(t.frame, t.offsets, t.x_um, t.y_um, noise=noise)
-        moving = (measured.lag > 0) & ~(measured.advance < settings.clean.advance)
+        moving = motion.advancing(measured)
         if moving.any():
             speed = float(np.median(measured.speed_um_frame[moving])) / video.frame_s
     return Look(

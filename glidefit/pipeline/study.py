@@ -13,6 +13,7 @@ import glidefit
 from glidefit.errors import NothingLeft
 from glidefit.evidence import (
     REASONS,
+    SHORT,
     BorrowedSpread,
     ChamberEvidence,
     CleanRecording,
@@ -298,7 +299,9 @@ def _condition(
         columns=fitted.columns,
         msd=msd,
         fit_problems=fitted.problems,
-        undecided=sum(int((r.clean.kept & ~r.clean.decided).sum()) for r in recordings),
+        undecided=sum(
+            int((~r.clean.decided & (r.clean.reason != SHORT)).sum()) for r in recordings
+        ),
         checks=checks,
         model=fitted.model,
         left_out=fitted.left_out,
@@ -374,13 +377,13 @@ def _why_nothing(
         f"{condition}: nothing left to fit; all of {len(reason)} tracks were set aside ({listed})."
     )
     worst = max(counts, key=lambda name: counts[name])
-    return f"{text} {_closest(worst, recordings, settings)}"
+    return f"{text} {_closest(worst, recordings)}"
 
 
-def _closest(worst: str, recordings: Sequence[CleanRecording], settings: SourcedSettings) -> str:
+def _closest(worst: str, recordings: Sequence[CleanRecording]) -> str:
     from glidefit.steps.clean import closest_miss
 
     return max(
-        (closest_miss(r.clean, worst, settings=settings.values.clean) for r in recordings),
+        (closest_miss(r.clean, worst) for r in recordings),
         key=lambda miss: miss[0],
     )[1]

@@ -18,6 +18,11 @@ from glidefit.evidence import (
 )
 from glidefit.kernels import drift as drifting
 from glidefit.kernels import motion
+from glidefit.kernels.motion_states import (
+    StateProbabilities,
+    smallest_noticed_speed,
+    state_probabilities,
+)
 from glidefit.results import Drift
 from glidefit.settings import CleanSettings
 from glidefit.tracks import Tracks
@@ -34,8 +39,8 @@ _DRIFT_FASTEST, _DRIFT_SLACK = 0.3, 0.01
 # Where drift could not be measured, what moves slower than this share of the typical speed
 # cannot be told from an object at rest on a drifting stage.
 _UNSEEN_DRIFT = 0.03
-# A short track at rest could be a glider if even half the typical speed would go unnoticed.
-_UNNOTICED_SHARE = 0.5
+# A circle of radius R about a pivot has an extent of 2√2 R.
+_EXTENT_OF_RADIUS = 2 * np.sqrt(2.0)
 
 
 def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str) -> CleanTracks:
@@ -64,29 +69,33 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
         )
         noise = _noise(tracks, where)
     measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
-    reason = _reasons(tracks, measured, noise, settings)
-    duration = _duration(tracks, frame_s)
+    jump = _jumps(measured, noise, settings)
     long_enough = tracks.n_positions >= MIN_POSITIONS
-    gliding = (reason == KEPT) & (measured.lag > 0)
-    typical = _median(measured.speed_um_frame[gliding]) / frame_s
-    noticed = motion.smallest_noticed_speed(
-        tracks.n_positions.astype(np.float64), duration, noise=noise, multiple=settings.stuck
+    creep = _DRIFT_SLACK if drift.measured else _UNSEEN_DRIFT
+    states = state_probabilities(
+        tracks.frame,
+        tracks.offsets,
+        tracks.x_um,
+        tracks.y_um,
+        noise=noise,
+        speed=measured.speed_um_frame,
+        radius=settings.pivot_extent / _EXTENT_OF_RADIUS,
+        creep=creep,
+        eligible=long_enough & ~jump,
     )
-    if not drift.measured and np.isfinite(typical):
-        slowest = _UNSEEN_DRIFT * typical
-        creeping = measured.extent_um <= slowest * duration + _STEP_NOISE * noise
-        # Of a short track so small an extent says nothing.
-        creeping &= typical * duration > 2 * (slowest * duration + _STEP_NOISE * noise)
-        reason[(reason == KEPT) & creeping] = STUCK
-        noticed = np.maximum(noticed, slowest)
-    undecided = (reason == STUCK) & (noticed > _UNNOTICED_SHARE * typical)
-    reason = np.where(undecided, KEPT, reason)
+    reason = _reasons(tracks, measured, states, jump, noise=noise, settings=settings)
+    gliding = (reason == KEPT) & (measured.lag > 0)
+    duration = _duration(tracks, frame_s)
+    noticed = smallest_noticed_speed(tracks.n_positions.astype(np.float64), duration, noise=noise)
+    noticed = np.maximum(noticed, states.slowest / frame_s)
+    surest = np.fmax(states.gliding, 1 - states.gliding)
     return CleanTracks(
         tracks=tracks,
         reason=reason.astype(np.str_),
-        decided=long_enough & ~undecided,
+        decided=long_enough & (jump | (surest >= settings.odds / (1 + settings.odds))),
+        gliding_probability=states.gliding,
         noise_um=noise,
-        typical_speed_um_s=typical,
+        typical_speed_um_s=_median(measured.speed_um_frame[gliding]) / frame_s,
         smallest_speed_um_s=_median(noticed[long_enough]),
         drift=drift,
         drift_x_um=shift[0],
@@ -117,26 +126,37 @@ def _median(values: Floats) -> float:
     return float(np.median(values)) if len(values) else float("nan")
 
 
-def _reasons(
-    tracks: Tracks, measured: motion.Motion, noise: float, settings: CleanSettings
-) -> NDArray[np.str_]:
-    """One reason a track, the first that holds: short, stuck, jump, pivoting, detached."""
-    limit = motion.spread_limit(tracks.n_positions, multiple=settings.stuck)
-    rest = measured.spread_um <= limit * noise
-    advancing = ~rest & (measured.advance >= settings.advance)
-    # Where no pair of displacements exists, nothing speaks against an advance.
-    advancing |= ~rest & np.isnan(measured.advance)
-    n_frames = tracks.frame[tracks.offsets[1:] - 1] - tracks.frame[tracks.offsets[:-1]]
-    pivoting = ~rest & motion.in_place(measured, n_frames, extent=settings.pivot_extent)
-    detached = ~rest & ~advancing & ~pivoting
-    typical = _median(measured.speed_um_frame[advancing & ~pivoting & (measured.lag > 0)])
+def _jumps(measured: motion.Motion, noise: float, settings: CleanSettings) -> NDArray[np.bool_]:
+    """Tracks with a step too long for the others' speed and for their own steps."""
+    moving = motion.advancing(measured)
     # Free diffusion makes long steps too: a jump also stands out of the track's own steps.
-    usual = np.fmax(typical, measured.median_step_um)
-    jump = measured.longest_step_um > settings.jump * usual + _STEP_NOISE * noise
+    usual = np.fmax(_median(measured.speed_um_frame[moving]), measured.median_step_um)
+    return np.asarray(measured.longest_step_um > settings.jump * usual + _STEP_NOISE * noise)
+
+
+def _reasons(
+    tracks: Tracks,
+    measured: motion.Motion,
+    states: StateProbabilities,
+    jump: NDArray[np.bool_],
+    *,
+    noise: float,
+    settings: CleanSettings,
+) -> NDArray[np.str_]:
+    """One reason a track, the first that holds: short, stuck, jump, pivoting, detached.
+
+    Whether a track glides is told by likelihood; how it stays in place if not, by its extent.
+    """
+    limit = motion.spread_limit(tracks.n_positions, multiple=settings.stuck)
+    gliding = states.gliding >= 0.5
+    creeps = states.at_rest >= np.fmax(states.confined, states.floating)
+    rest = ~gliding & ~jump & ((measured.spread_um <= limit * noise) | creeps)
+    n_frames = tracks.frame[tracks.offsets[1:] - 1] - tracks.frame[tracks.offsets[:-1]]
+    in_place = motion.in_place(measured, n_frames, extent=settings.pivot_extent)
     reason = np.full(tracks.n_tracks, KEPT, dtype="U16")
     for name, holds in (
-        (DETACHED, detached),
-        (PIVOTING, pivoting),
+        (DETACHED, ~gliding),
+        (PIVOTING, ~gliding & in_place),
         (JUMP, jump),
         (STUCK, rest),
         (SHORT, tracks.n_positions < MIN_POSITIONS),
@@ -185,7 +205,7 @@ def _resting_objects(tracks: Tracks, noise: float, settings: CleanSettings) -> N
         tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um
     )
     measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
-    moving = (measured.lag > 0) & (measured.advance >= settings.advance)
+    moving = motion.advancing(measured) & np.isfinite(measured.advance)
     typical = _median(measured.speed_um_frame[moving])
     if not np.isfinite(typical):
         typical = 0.0  # nothing advances: only noise separates the objects
@@ -222,9 +242,7 @@ def _no_drift(n_objects: int, note: str) -> Drift:
     )
 
 
-def closest_miss(
-    cleaned: CleanTracks, reason: str, *, settings: CleanSettings
-) -> tuple[float, str]:
+def closest_miss(cleaned: CleanTracks, reason: str) -> tuple[float, str]:
     """How near the best of the tracks with this reason came to being kept.
 
     Returns
@@ -239,32 +257,23 @@ def closest_miss(
         return float("-inf"), ""
     t, noise = cleaned.tracks, cleaned.noise_um
     m = motion.measure(t.frame, t.offsets, t.x_um, t.y_um, noise=noise)
-    if reason == STUCK:
-        limit = motion.spread_limit(t.n_positions, multiple=settings.stuck)
-        reached, rule = m.spread_um / np.maximum(limit * noise, 1e-12), "clean.stuck"
-        what = "strays {value:.2g} × noise from its mean; it must exceed {limit:.3g} × noise"
-        value, bound = m.spread_um / max(noise, 1e-12), limit
-    elif reason == DETACHED:
-        reached, rule = m.advance / settings.advance, "clean.advance"
-        what = "has a mean cosine of {value:.2g} between displacements; it must reach {limit:.3g}"
-        value, bound = m.advance, np.full(t.n_tracks, settings.advance)
-    elif reason == PIVOTING:
-        reached, rule = m.extent_um / settings.pivot_extent, "clean.pivot_extent"
-        what = "goes round within {value:.2g} µm; beyond {limit:.3g} µm it would not pivot in place"
-        value, bound = m.extent_um, np.full(t.n_tracks, settings.pivot_extent)
+    if reason in (STUCK, PIVOTING, DETACHED):
+        value, bound = cleaned.gliding_probability, np.full(t.n_tracks, 0.5)
+        reached, advice = value / bound, "if they do glide, film longer"
+        what = "glides with a probability of {value:.2g}; it must reach {limit:.3g}"
     elif reason == JUMP:
-        usual = np.fmax(cleaned.typical_speed_um_s, 0) + 0 * m.longest_step_um
-        reached, rule = -m.longest_step_um, "clean.jump"
+        reached, advice = -m.longest_step_um, "if they do glide, change clean.jump"
         what = "has a step of {value:.2g} µm in one frame"
-        value, bound = m.longest_step_um, usual
+        value, bound = m.longest_step_um, m.longest_step_um
     else:
-        reached, rule = t.n_positions / MIN_POSITIONS, "link.max_gap"
+        reached = t.n_positions / MIN_POSITIONS
+        advice = "if they do glide, change link.max_gap"
         what = "has {value:.0f} positions; a track needs {limit:.0f}"
         value, bound = t.n_positions.astype(float), np.full(t.n_tracks, float(MIN_POSITIONS))
     reached = np.where(chosen & np.isfinite(reached), reached, -np.inf)
     best = int(np.argmax(reached))
     said = what.format(value=value[best], limit=bound[best])
     return float(reached[best]), (
-        f"The nearest of the {int(chosen.sum())} {reason} tracks, {t.label[best]}, {said} "
-        f"({rule}). Look at the tracks; if they do glide, change that setting."
+        f"The nearest of the {int(chosen.sum())} {reason} tracks, {t.label[best]}, {said}. "
+        f"Look at the tracks; {advice}."
     )

@@ -48,6 +48,8 @@ _SPREAD_OF = {
     "rotational_diffusion_rad2_s": "rotational_diffusion",
     "motile_fraction": "motile_fraction",
 }
+# Of the kept tracks, so many may be undecided before it is a problem.
+_FEW_UNDECIDED = 0.02
 
 
 def counts(recordings: Sequence[CleanRecording]) -> Counts:
@@ -180,6 +182,7 @@ def tracks(
                 rotational_diffusion_low_rad2_s=_short(turning[1, k]),
                 rotational_diffusion_high_rad2_s=_short(turning[2, k]),
                 rotational_diffusion_problem=str(problem[k]),
+                gliding_probability=_short(r.clean.gliding_probability[k]),
             )
             for k in range(t.n_tracks)
         ]
@@ -418,10 +421,10 @@ def problems(
             f"{left_out} of {kept} kept tracks are so unlike the others that they did not enter "
             "the likelihood. Look at them: floating filaments, or two joined to one track?"
         )
-    if undecided:
+    if undecided > _FEW_UNDECIDED * kept:
         out.append(
-            f"{undecided} {'track is' if undecided == 1 else 'tracks are'} too short to tell "
-            "gliding from rest: kept for the fit, left out of the motile fraction."
+            f"{undecided} {'track says' if undecided == 1 else 'tracks say'} too little of whether "
+            "they glide: they are left out of the motile fraction (clean.odds)."
         )
     return out
 

@@ -12,14 +12,14 @@ from glidefit.writing.wording import visible
 # Reason: (what the rule says, the setting that holds its limit).
 _RULES = {
     "stuck": (
-        "Strayed no farther from its mean position than noise explains. "
+        "Strayed no farther from its mean position than noise and the stage explain. "
         "It still counts in the motile fraction, as not gliding.",
         "clean.stuck",
     ),
     "pivoting": ("Turned on the spot instead of getting away from it.", "clean.pivot_extent"),
     "detached": (
-        "Moved without a net advance, as a filament does that floats beside the motors.",
-        "clean.advance",
+        "More likely floats beside the motors than glides: its steps do not keep a direction.",
+        "",
     ),
     "jump": (
         "Took a step too long for its speed: most likely two tracers joined to one track.",

@@ -65,7 +65,7 @@ def estimates_table(study: StudyResult) -> str:
 
 def per_track_table(study: StudyResult) -> str:
     """One row a track, kept and set aside."""
-    names = (*_TRACK, "kept", "set_aside_reason", *_LENGTHS, *_OWN)
+    names = (*_TRACK, "kept", "set_aside_reason", *_LENGTHS, *_OWN, "gliding_probability")
     rows = [[c.condition, *_columns(t, names)] for c in study.conditions for t in c.tracks]
     return table_text(["condition", *names], rows)
 

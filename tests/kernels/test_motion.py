@@ -101,17 +101,6 @@ def test_rest_passes_for_motion_as_rarely_as_stated(n):
     assert (spread > limit).sum() <= 9
 
 
-def test_smallest_noticed_speed_is_where_the_rule_for_rest_ends():
-    noise, n, frame_s = 0.03, 400, 0.5
-    slowest = motion.smallest_noticed_speed(
-        np.array([float(n)]), np.array([(n - 1) * frame_s]), noise=noise, multiple=2.0
-    )[0]
-    limit = motion.spread_limit(np.array([n]), multiple=2.0)[0] * noise
-    t = np.arange(n) * frame_s
-    assert measured((np.arange(n), 0.95 * slowest * t, 0 * t)).spread_um[0] < limit
-    assert measured((np.arange(n), 1.05 * slowest * t, 0 * t)).spread_um[0] > limit
-
-
 def test_pivoting_and_small_circles_stay_in_place_and_gliding_does_not():
     rng = np.random.default_rng(7)
     angle = np.cumsum(0.6 * rng.standard_normal(300))

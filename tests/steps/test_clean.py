@@ -196,13 +196,130 @@ def test_tracks_without_three_successive_frames_are_refused():
 
 
 @pytest.mark.parametrize("kind", ["stuck", "pivoting", "detached"])
-def test_the_nearest_miss_names_rule_and_value(kind):
+def test_the_nearest_miss_names_its_probability(kind):
     none_glides = replace(KINESIN, motile_fraction=0.0)
     recording, scenario = film(none_glides, **{f"{kind}_fraction": 1.0})
     found = cleaned(recording, scenario)
     assert (found.reason == kind).sum() > 5
-    nearness, text = closest_miss(found, kind, settings=CleanSettings())
-    assert nearness <= 1.0
-    rule = {"stuck": "stuck", "pivoting": "pivot_extent", "detached": "advance"}[kind]
-    assert f"(clean.{rule})" in text
+    nearness, text = closest_miss(found, kind)
+    assert nearness < 1.0
+    best = found.gliding_probability[found.reason == kind].max()
+    assert f"glides with a probability of {best:.2g}; it must reach 0.5" in text
     assert f"{(found.reason == kind).sum()} {kind} tracks" in text
+
+
+def gliding_frames(recording, found):
+    """Share of the filament-frames of gliders, and of the others, that are kept."""
+    glides, frames = recording.truth.kind == "gliding", recording.tracks.n_positions
+    return tuple(
+        frames[these & found.kept].sum() / frames[these].sum() for these in (glides, ~glides)
+    )
+
+
+@pytest.mark.parametrize(
+    ("change", "frame_s"),
+    [
+        ({"stop_rate_per_s": 0.03, "start_rate_per_s": 0.05}, 1 / 3),  # pauses of 20 s
+        ({"turning_rate_rad_s": 0.5}, 1 / 3),  # circles of 1.6 µm, come back to
+        ({"speed_um_s": 0.006, "longitudinal_diffusion_um2_s": 0.0}, 0.5),  # 20 σ in 200 frames
+    ],
+    ids=["pausing", "circling", "slow"],
+)
+def test_gliders_that_look_like_something_else_stay(change, frame_s):
+    """Thresholds lose 4 to 7 % of the first two and keep all that is stuck in the third.
+
+    Pausing gliders that were seen in nothing but a pause are lost, in this recording 5 %.
+    """
+    recording, scenario = film(replace(KINESIN, **change), frame_s=frame_s, exposure_s=0.0, **MIXED)
+    found = cleaned(recording, scenario)
+    kept, wrong = gliding_frames(recording, found)
+    assert kept > 0.94
+    assert wrong < 0.01
+    # What is lost was seen in nothing but a pause; noise alone strays by less than 3 σ.
+    lost = found.tracks.select((recording.truth.kind == "gliding") & (found.reason == "stuck"))
+    for k in range(lost.n_tracks):
+        assert np.hypot(lost.x_um[lost.rows(k)].std(), lost.y_um[lost.rows(k)].std()) < 0.09
+
+
+def test_short_tracks_are_judged_by_what_the_others_do():
+    """Fragments of 10 frames: thresholds keep 5 to 10 % of what does not glide."""
+    recording, scenario = film(
+        KINESIN, frame_s=1 / 3, exposure_s=0.0, break_probability=0.1, **MIXED
+    )
+    found = cleaned(recording, scenario)
+    long_enough = recording.tracks.n_positions >= 3
+    recording = replace(
+        recording,
+        tracks=recording.tracks.select(long_enough),
+        truth=replace(recording.truth, kind=recording.truth.kind[long_enough]),
+    )
+    found = replace(found, reason=found.reason[long_enough])
+    kept, wrong = gliding_frames(recording, found)
+    assert kept > 0.99
+    assert wrong < 0.03
+
+
+def test_wrong_positions_do_not_make_stuck_objects_glide():
+    recording, scenario = film(KINESIN, frame_s=1 / 3, exposure_s=0.0, stuck_fraction=0.3)
+    rng = np.random.default_rng(5)
+    off = (rng.random(len(recording.tracks.frame)) < 0.01) * 1.0
+    tracks = recording.tracks.moved(recording.tracks.x_um + off, recording.tracks.y_um)
+    found = clean(tracks, frame_s=scenario.frame_s, settings=CleanSettings(), where="film")
+    stuck = recording.truth.kind == "stuck"
+    assert stuck.sum() > 10
+    assert np.all(found.reason[stuck] == "stuck")
+    assert found.kept[~stuck & (tracks.n_positions >= 10)].mean() > 0.98
+
+
+def test_every_judged_track_has_a_probability_and_what_jumps_or_is_short_has_none():
+    recording, scenario = film(KINESIN, frame_s=1 / 3, break_probability=0.05, **MIXED)
+    tracks = shifted(
+        recording.tracks, track=int(np.argmax(recording.tracks.n_positions)), frame=9, by=9.0
+    )
+    found = clean(tracks, frame_s=scenario.frame_s, settings=CleanSettings(), where="film")
+    unknown = np.isin(found.reason, ("jump", "short"))
+    assert (found.reason == "jump").sum() == 1
+    assert np.array_equal(np.isnan(found.gliding_probability), unknown)
+    assert np.all((found.gliding_probability[~unknown] >= 0.5) == found.kept[~unknown])
+    sure = np.abs(found.gliding_probability - 0.5) >= 0.25  # odds of 3 : 1
+    assert np.array_equal(found.decided[~unknown], sure[~unknown])
+
+
+def test_lower_odds_decide_more():
+    recording, scenario = film(SLOW, frame_s=2.0, break_probability=0.2, **MIXED)
+    decided = [cleaned(recording, scenario, odds=odds).decided.sum() for odds in (1, 3, 1000)]
+    assert decided[0] > decided[1] > decided[2]
+    assert decided[0] == (recording.tracks.n_positions >= 3).sum()
+
+
+def test_the_order_of_tracks_changes_no_verdict():
+    recording, scenario = film(KINESIN, frame_s=1 / 3, break_probability=0.05, **MIXED)
+    tracks, settings = recording.tracks, CleanSettings()
+    backwards = np.arange(tracks.n_tracks)[::-1]
+    rows = np.concatenate([np.arange(*tracks.offsets[k : k + 2]) for k in backwards])
+    turned = Tracks(
+        label=tracks.label[backwards],
+        offsets=np.concatenate([[0], np.cumsum(tracks.n_positions[backwards])]),
+        frame=tracks.frame[rows],
+        time_s=tracks.time_s[rows],
+        x_um=tracks.x_um[rows],
+        y_um=tracks.y_um[rows],
+    )
+    one = clean(tracks, frame_s=scenario.frame_s, settings=settings, where="film")
+    two = clean(turned, frame_s=scenario.frame_s, settings=settings, where="film")
+    assert np.array_equal(two.reason[::-1], one.reason)
+    # Sums over tracks in another order differ by rounding.
+    assert_allclose(two.gliding_probability[::-1], one.gliding_probability, atol=1e-9)
+
+
+@pytest.mark.parametrize(("kind", "reason"), [("gliding", ""), ("stuck", "stuck")])
+@pytest.mark.parametrize("filaments", [1.0, 40.0])
+def test_recordings_of_one_kind_or_of_one_track(kind, reason, filaments):
+    condition = replace(KINESIN, motile_fraction=float(kind == "gliding"))
+    recording, scenario = film(
+        condition, frame_s=1 / 3, seed=3, filaments_in_field=filaments, field_um=(20.0, 20.0)
+    )
+    found = cleaned(recording, scenario)
+    long_enough = recording.tracks.n_positions >= 20
+    assert long_enough.sum() >= 1
+    assert set(found.reason[long_enough]) == {reason}

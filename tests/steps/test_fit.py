@@ -264,6 +264,7 @@ def test_two_tracks_are_fitted_although_nothing_is_usual_among_them():
             tracks=whole.clean.tracks.select(two),
             reason=whole.clean.reason[two],
             decided=whole.clean.decided[two],
+            gliding_probability=whole.clean.gliding_probability[two],
         ),
     )
     done = fit([few], settings=SETTINGS.fit)

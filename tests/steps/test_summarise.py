@@ -178,8 +178,8 @@ def test_a_heading_correlation_that_disagrees_is_a_problem():
 
 def test_undecided_tracks_are_told():
     assert told(undecided=1) == [
-        "1 track is too short to tell gliding from rest: kept for the fit, left out of the motile "
-        "fraction."
+        "1 track says too little of whether they glide: they are left out of the motile fraction "
+        "(clean.odds)."
     ]
 
 
