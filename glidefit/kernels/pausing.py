@@ -21,8 +21,6 @@ Ints = NDArray[np.int64]
 # deviation of 1/1.3 of their distance: their sum is flat to 1 part in 10^4.
 _N_HEADINGS = 16
 _HEADING_WIDTH = 1 / 1.3
-# Half as many where they reach less far than this, in rad: still closer to each other.
-_NARROW = 0.8
 # They reach to so many standard deviations from the chord of the first positions, or all around.
 _REACH = 3.5
 # They are joined after so many positions or more: once the filament is so many mean steps away
@@ -258,7 +256,7 @@ def _start(
     waits, likely = np.full(_N_HEADINGS // LANES, -1.0), np.empty(_N_HEADINGS)
     for k in range(len(offsets) - 1):
         first = offsets[k]
-        n, distance = _begin(time, position, first, clear[k], model, blocks)
+        distance = _begin(time, position, first, clear[k], model, blocks)
         likely[:] = 0.0
         before = math.log(2 * math.pi / distance)
         for row in range(first + 1, clear[k]):
@@ -266,7 +264,7 @@ def _start(
             if abs(wait - last) > 1e-9 * wait:
                 pc.fill_branches(table, wait, model[hf.EXPOSURE], rates[0], rates[1])
                 last = wait
-            for b in range(n // LANES):
+            for b in range(_N_HEADINGS // LANES):
                 w = blocks[b]
                 for lane in range(LANES):
                     pf.see(w, lane, x[row], y[row], error[row])
@@ -278,10 +276,10 @@ def _start(
                     i = b * LANES + lane
                     likely[i] += w[pf.HEIGHT + lane] + math.log(w[pf.TOTAL + lane]) - LOG_2PI
                     best = max(best, likely[i])
-            after = best + math.log(np.exp(likely[:n] - best).sum())
+            after = best + math.log(np.exp(likely - best).sum())
             log_density[row] = after - before
             before = after
-        _join(blocks, np.exp(likely[:n] - likely[:n].max()), states[k])
+        _join(blocks, np.exp(likely - likely.max()), states[k])
 
 
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]
@@ -292,11 +290,8 @@ def _begin(
     clear: int,
     model: Floats,
     blocks: Floats,
-) -> tuple[int, float]:
-    """Headings that the first positions leave possible, each in both modes.
-
-    Returns their number and distance.
-    """
+) -> float:
+    """Headings that the first positions leave possible, each in both modes; their distance."""
     x, y, error = position
     end = clear - 1
     dx, dy, spent = x[end] - x[first], y[end] - y[first], time[end] - time[first]
@@ -307,13 +302,12 @@ def _begin(
     variance += model[hf.TURNING_RATE_VARIANCE] * spent * spent / 4
     reach = min(math.pi, _REACH * math.sqrt(variance))
     middle = math.atan2(dy, dx) - 0.5 * model[hf.TURNING_RATE] * spent
-    n = LANES if reach < _NARROW else _N_HEADINGS
-    distance = 2 * reach / n
+    distance = 2 * reach / _N_HEADINGS
     state, s = np.zeros((2, N_STATE + 1)), np.zeros(hf.N_WORK)
-    for b in range(n // LANES):
+    for b in range(_N_HEADINGS // LANES):
         s[:] = 0.0
         for lane in range(LANES):
-            s[2 * LANES + lane] = middle + distance * (b * LANES + lane - 0.5 * (n - 1))
+            s[2 * LANES + lane] = middle + distance * (b * LANES + lane - 0.5 * (_N_HEADINGS - 1))
             s[3 * LANES + lane], s[4 * LANES + lane] = model[hf.SPEED], model[hf.TURNING_RATE]
             s[14 * LANES + lane] = (_HEADING_WIDTH * distance) ** 2
             s[17 * LANES + lane] = model[hf.SPEED_VARIANCE]
@@ -329,7 +323,7 @@ def _begin(
             state[1, 5] = state[1, 10] = error[first] + model[hf.ERROR_ALONG]
             state[0, N_STATE], state[1, N_STATE] = _FIRST_RUNNING, 1 - _FIRST_RUNNING
             _put(blocks[b], lane, state)
-    return n, distance
+    return distance
 
 
 @njit(**hf.COMPILED)  # type: ignore[untyped-decorator]

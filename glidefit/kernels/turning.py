@@ -12,7 +12,14 @@ Ints = NDArray[np.int64]
 
 
 def turning_rates(
-    frame: Ints, time_s: Floats, offsets: Ints, x: Floats, y: Floats, *, lag: int
+    frame: Ints,
+    time_s: Floats,
+    offsets: Ints,
+    x: Floats,
+    y: Floats,
+    *,
+    lag: int,
+    shortest: float = 0.0,
 ) -> tuple[Floats, Floats, Floats]:
     """Mean turning rate of each track, of its first and of its second half.
 
@@ -27,6 +34,9 @@ def turning_rates(
         Rows of track k are ``offsets[k]:offsets[k + 1]``.
     lag : int
         In frames, >= 1; displacements over it should be far longer than the localization error.
+    shortest : float
+        Angles at a displacement shorter than this, in µm, are passed over: in a pause the noise
+        turns.
 
     Returns
     -------
@@ -42,6 +52,8 @@ def turning_rates(
     there = last >= 0
     i, j, k = first[there], middle[there], last[there]
     one, two = (x[j] - x[i]) + 1j * (y[j] - y[i]), (x[k] - x[j]) + 1j * (y[k] - y[j])
+    clear = np.minimum(np.abs(one), np.abs(two)) >= shortest
+    i, j, k, one, two = i[clear], j[clear], k[clear], one[clear], two[clear]
     rate = np.angle(two * one.conj()) / ((time_s[k] - time_s[i]) / 2)
     owner = np.repeat(np.arange(m), np.diff(offsets))[j]
     half = (frame[offsets[:-1]] + frame[offsets[1:] - 1]) / 2

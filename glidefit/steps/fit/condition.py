@@ -147,7 +147,9 @@ def _with_or_without_pauses(
         return fitted(True), Pauses(promise=np.nan, forced=forced)
     without = fitted(False)
     likely = [one.likelihood for one in without if one.likelihood is not None]
-    promise = 1000 * float(np.mean([one.promise for one in likely]))
+    promises = np.array([one.promise for one in likely])
+    # A chamber that could not be fitted without pauses may have them.
+    promise = 1000 * float(np.nanmean(promises)) if np.isfinite(promises).all() else np.nan
     pauses = Pauses(promise=promise, forced=forced)
     if not pauses.promising:
         return without, pauses
@@ -156,7 +158,11 @@ def _with_or_without_pauses(
     pauses = compare_pauses(
         promise,
         [one.log_likelihood for one in likely],
-        [one.likelihood.log_likelihood for one in results if one.likelihood is not None],
+        [
+            np.where(one.likelihood.used, one.likelihood.log_likelihood, np.nan)
+            for one in results
+            if one.likelihood is not None
+        ],
         rates[:, 0] / rates.sum(axis=1),
     )
     return (results if pauses.seen else without), pauses

@@ -58,7 +58,7 @@ class ChamberLikelihood:
     innovation : (k, 2) array
         Normalised innovations of the tracks used, NaN at the start of each track.
     log_likelihood : (m,) array
-        Of each track at the optimum; NaN for tracks left out.
+        Of each track at the optimum, used or not; NaN of single positions.
     promise : float
         Log likelihood that a few pauses add or cost, by position; NaN where pauses are fitted.
     problem : str
@@ -176,7 +176,10 @@ def _fit_group(
         if fit.problem:
             return _failed(len(counts), len(names), fit.problem)
         start = _named(fit)
-    return _with_mean_over_frames(data, fit, counts, used, held="speed" in known.fixed)
+    mean = _with_mean_over_frames(data, fit, counts, used, held="speed" in known.fixed)
+    likely = np.full(len(counts), np.nan)
+    likely[judged] = np.add.reduceat(every.log_density(start), every.offsets[:-1])
+    return replace(mean, log_likelihood=likely)
 
 
 def _parameters(start: Mapping[str, float], known: FitParameters) -> lmfit.Parameters:
@@ -275,8 +278,6 @@ def _with_mean_over_frames(
         values[0] = float(weight @ np.where(tells, own, 0.0) / weight.sum())
         influence[used, 0] = weight * (np.where(tells, own, 0.0) - values[0]) / weight.sum()
     speed, speed_error = np.full(len(counts), np.nan), np.full(len(counts), np.nan)
-    likely = np.full(len(counts), np.nan)
-    likely[used] = fit.log_likelihood
     speed[used], speed_error[used] = np.where(tells, own, np.nan), np.where(tells, error, np.nan)
     return ChamberLikelihood(
         values=values,
@@ -285,7 +286,7 @@ def _with_mean_over_frames(
         speed_error=speed_error,
         used=used,
         innovation=data.filtered(named).innovation,
-        log_likelihood=likely,
+        log_likelihood=np.full(len(counts), np.nan),
         promise=_promise(data, named),
         problem="",
     )

@@ -22,7 +22,8 @@ ACTIVE, CIRCLING, PAUSING = "active", "circling", "pausing"
 _PRACTICAL = 0.1
 # And it must be seen in the chambers at this level, or in the tracks where there is one chamber.
 _LEVEL = 0.99
-# Displacements between which turning is read are this many localization errors long.
+# Displacements between which turning is read are this many localization errors long, and at least
+# half as long each.
 _CLEAR = 10.0
 # Pauses must take this share of the time before they are worth two parameters: left out, the
 # speed while running comes out too low by as much.
@@ -169,15 +170,16 @@ def compare_pauses(
     ----------
     promise : float
     without, with_pauses : sequences of arrays
-        By chamber, log likelihood of each track; NaN where it was left out.
+        By chamber, log likelihood of each track; NaN of all where the fit failed, and of those
+        that the fit with pauses left out.
     shares : (c,) array
         Share of the time paused, NaN for chambers where the fit failed.
     """
     gains = []
     for one, two in zip(without, with_pauses, strict=True):
-        both = np.isfinite(two) & (np.isfinite(one) | ~np.isfinite(one).any())
         # Where there was no fit without pauses, that with pauses has nothing to beat.
-        gains.append(float((two - np.nan_to_num(one, nan=-np.inf))[both].sum()))
+        failed = not np.isfinite(one).any()
+        gains.append(np.inf if failed else float(np.nansum(two - one)))
     seen = np.isfinite(shares) & (np.array(gains) > _GAIN)
     share = float(np.nanmean(shares)) if np.isfinite(shares).any() else 0.0
     return Pauses(promise=promise, share=share, chambers=float(seen.mean()))
@@ -236,7 +238,11 @@ def _chamber(members: Sequence[Kept], speed: float) -> tuple[Floats, Floats, Flo
     for one in members:
         t, step = one.tracks, speed * one.source.frame_s
         lag = max(1, int(np.ceil(_CLEAR * one.source.clean.noise_um / max(step, 1e-12))))
-        whole, first, second = turning_rates(t.frame, t.time_s, t.offsets, t.x_um, t.y_um, lag=lag)
+        whole, first, second = turning_rates(
+            *(t.frame, t.time_s, t.offsets, t.x_um, t.y_um),
+            lag=lag,
+            shortest=0.5 * _CLEAR * one.source.clean.noise_um,
+        )
         there = np.isfinite(whole) & np.isfinite(first) & np.isfinite(second)
         rates.append(whole[there])
         products.append((first * second)[there])
