@@ -112,8 +112,7 @@ def _filaments(chamber: ChamberEvidence, columns: list[int], rule: _Rule) -> flo
     """Sampling variance that the filaments of a chamber bring, on the scale of the rule."""
     values = chamber.values[columns]
     moved = rule.scale(*(values + chamber.influence[:, columns]).T) - rule.scale(*values)
-    m = len(moved)
-    return float(np.sum((moved - moved.mean()) ** 2) * m / max(m - 1, 1))
+    return len(moved) * float(moved.var(ddof=1)) if len(moved) > 1 else 0.0
 
 
 def _spread(
