@@ -355,6 +355,7 @@ class ResponseCurve:
     formula: str
     points: tuple[ResponsePoint, ...]
     x: tuple[float, ...]
+    at_inhibitor: tuple[float, ...]  # at which each piece of the curve is drawn; NaN without one
     curve: tuple[float, ...]
     low: tuple[float, ...]
     high: tuple[float, ...]

@@ -13,7 +13,7 @@ from glidefit.results import Comparison, ConditionPair, ConditionResult, DayChar
 from glidefit.settings import Settings, SourcedSettings
 
 if TYPE_CHECKING:
-    from glidefit.steps import compare
+    from glidefit.steps import compare, response
 
 _WORDS = ("control", "all")
 
@@ -94,13 +94,40 @@ def side_by_side(
     settings : Settings
     seed : int
     """
-    from glidefit.steps import compare
+    from glidefit.steps import compare, response
 
     level = settings.interval.level
     comparisons, pairs = compare.compare(
         conditions, settings=settings.compare, level=level, seed=seed, filmed=filmed_at(sheet)
     )
-    return SideBySide(conditions=tuple(conditions), comparisons=comparisons, pairs=pairs)
+    curves = response.responses(
+        conditions, sheet_columns(sheet), settings=settings.response, level=level
+    )
+    return SideBySide(
+        conditions=tuple(conditions), comparisons=comparisons, pairs=pairs, responses=curves
+    )
+
+
+def sheet_columns(sheet: Sequence[Recording]) -> dict[str, response.SheetColumns]:
+    """By condition, the distinct values of the sheet's own columns."""
+    from glidefit.steps import response
+
+    by_condition: dict[str, list[Recording]] = {}
+    for r in sheet:
+        by_condition.setdefault(r.condition, []).append(r)
+    return {
+        condition: response.SheetColumns(
+            numbers={
+                name: tuple(dict.fromkeys(r.numbers[name] for r in own if name in r.numbers))
+                for name in dict.fromkeys(name for r in own for name in r.numbers)
+            },
+            labels={
+                name: tuple(dict.fromkeys(r.labels[name] for r in own if name in r.labels))
+                for name in dict.fromkeys(name for r in own for name in r.labels)
+            },
+        )
+        for condition, own in by_condition.items()
+    }
 
 
 def filmed_at(sheet: Sequence[Recording]) -> list[compare.FilmedAt]:
