@@ -25,8 +25,9 @@ class SideBySide:
     conditions: tuple[ConditionResult, ...]
     comparisons: tuple[Comparison, ...]
     pairs: tuple[ConditionPair, ...]
-    responses: tuple[ResponseCurve, ...] = ()
-    day_charts: tuple[DayChart, ...] = ()
+    responses: tuple[ResponseCurve, ...]
+    day_charts: tuple[DayChart, ...]
+    problems: tuple[str, ...]
 
 
 def check_names(assay: Assay, settings: SourcedSettings) -> None:
@@ -94,7 +95,7 @@ def side_by_side(
     settings : Settings
     seed : int
     """
-    from glidefit.steps import compare, response
+    from glidefit.steps import compare, day_chart, response
 
     level = settings.interval.level
     comparisons, pairs = compare.compare(
@@ -103,8 +104,14 @@ def side_by_side(
     curves = response.responses(
         conditions, sheet_columns(sheet), settings=settings.response, level=level
     )
+    charts = day_chart.day_charts(conditions)
     return SideBySide(
-        conditions=tuple(conditions), comparisons=comparisons, pairs=pairs, responses=curves
+        conditions=day_chart.with_problems(conditions, charts),
+        comparisons=comparisons,
+        pairs=day_chart.with_pair_problems(pairs, conditions, charts),
+        responses=curves,
+        day_charts=charts,
+        problems=day_chart.study_problems(charts),
     )
 
 
