@@ -317,10 +317,10 @@ def curve_residual(
 
 
 def _covariance(jacobian: Floats, variance: float) -> Floats:
-    """variance (JᵀJ)⁻¹; infinite where the data do not determine every parameter."""
+    """variance (JᵀJ)⁻¹; NaN where the data do not determine every parameter."""
     size = np.sqrt((jacobian**2).sum(axis=0))
     n_parameters = jacobian.shape[1]
-    unknown = np.full((n_parameters, n_parameters), np.inf)
+    unknown = np.full((n_parameters, n_parameters), np.nan)
     if not (np.all(np.isfinite(jacobian)) and np.all(size > 0)):
         return unknown
     _, singular, vt = np.linalg.svd(jacobian / size, full_matrices=False)

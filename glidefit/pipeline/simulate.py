@@ -141,6 +141,7 @@ def _written(folder: Path, film: _Film, name: str) -> dict[str, str]:
         "field": recording.field,
         "minutes": f"{recording.minutes:g}",
         "control": "yes" if recording.control else "",
+        **dict(recording.columns),
     }
     if film.part.video is None:
         run_folder.write_files(folder, {f"tracks/{name}.csv": track_table_text(recording.tracks)})

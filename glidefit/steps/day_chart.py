@@ -84,10 +84,11 @@ def out_of_control(charts: Sequence[DayChart]) -> dict[str, str]:
 
 
 def _what(chart: DayChart, day: ChartDay) -> str:
+    off = day.value / chart.centre - 1
     return (
-        f"{chart.condition} ran at {day.value:.3g} µm/s, {day.value / chart.centre - 1:+.0%} of "
-        f"its centre line {chart.centre:.3g} (limits {chart.low:.3g} to {chart.high:.3g}): "
-        f"{', '.join(day.signals)}"
+        f"{chart.condition} ran at {day.value:.3g} µm/s, {abs(off):.0%} "
+        f"{'above' if off > 0 else 'below'} its centre line {chart.centre:.3g} "
+        f"(limits {chart.low:.3g} to {chart.high:.3g}): {', '.join(day.signals)}"
     )
 
 

@@ -61,6 +61,7 @@ class ScenarioCondition:
     start_rate_per_s: float = 0.0
     motile_fraction: float | None = None  # gliding / seen at a moment; None: what others leave
     control: bool = False
+    columns: tuple[tuple[str, str], ...] = ()  # more columns of the sheet: name, text
 
     def __post_init__(self) -> None:
         if not self.speed_um_s > 0:
@@ -108,7 +109,9 @@ class Scenario:
     exposed_steps: int = 1  # positions kept of each exposure, for drawing smeared spots
     pixel_um: float = 0.16
     localization_error_um: float = 0.03
+    first_day: str = _FIRST_DAY.isoformat()
     days: int = 3
+    day_speed_factors: tuple[float, ...] = ()  # what goes wrong on a day: a factor for each
     chambers_per_day: int | tuple[int, ...] = 2  # of each condition; or a number for each day
     recordings_per_chamber: int = 1  # each of its own field of view
     # Of all kinds, expected in a recording at a moment; or a number for each chamber of each day.
@@ -151,7 +154,11 @@ class Scenario:
             raise ValueError("pixel_um and drift_wander_time_s must be > 0")
         if min(self.localization_error_um, self.detached_diffusion_um2_s) < 0:
             raise ValueError("localization_error_um and detached_diffusion_um2_s must be >= 0")
-        _ = self.timing  # its own checks
+        if len(self.day_speed_factors) not in (0, self.days):
+            raise ValueError("day_speed_factors must have a number for each of the days")
+        if self.day_speed_factors and not min(self.day_speed_factors) > 0:
+            raise ValueError("day_speed_factors must be > 0")
+        _ = self.timing, date.fromisoformat(self.first_day)  # their own checks
 
     @property
     def chambers_of_day(self) -> tuple[int, ...]:
@@ -222,6 +229,7 @@ class SimulatedRecording:
     name: str
     condition: str
     control: bool
+    columns: tuple[tuple[str, str], ...]
     day: str
     chamber: str  # unique within its day
     field: str
@@ -286,6 +294,8 @@ def _simulate_day(
     """The recordings of one day; the chambers of the conditions follow each other in turn."""
     filaments = scenario.filaments_of_day[number]
     shared = _factors("day", scenario, rng=rng)
+    if scenario.day_speed_factors:
+        shared = (shared[0] * scenario.day_speed_factors[number], shared[1])
     today = [_moved(condition, scenario, "day", rng=rng) for condition in scenario.conditions]
     streams = rng.spawn(len(scenario.conditions))
     own = [
@@ -303,7 +313,7 @@ def _simulate_day(
             recordings += _simulate_chamber(
                 replace(scenario, filaments_in_field=in_field),
                 condition,
-                day=(_FIRST_DAY + timedelta(days=number)).isoformat(),
+                day=(date.fromisoformat(scenario.first_day) + timedelta(days=number)).isoformat(),
                 chamber=f"c{turn * len(today) + k + 1}",
                 day_truth=own[k],
                 rng=chambers[k][turn],
@@ -355,6 +365,7 @@ def _simulate_chamber(
                 name=f"{day}_{chamber}_f{number + 1}",
                 condition=condition.name,
                 control=condition.control,
+                columns=condition.columns,
                 day=day,
                 chamber=chamber,
                 field=f"f{number + 1}",

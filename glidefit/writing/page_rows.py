@@ -8,7 +8,6 @@ from dataclasses import dataclass
 
 from glidefit.quantities import QUANTITIES, Quantity
 from glidefit.results import (
-    Comparison,
     ConditionResult,
     Drift,
     Estimate,
@@ -17,7 +16,7 @@ from glidefit.results import (
     RecordingResult,
     SettingRow,
 )
-from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
+from glidefit.writing.rounding import NONE, Rounded, percent, rounded, significant
 from glidefit.writing.wording import counted, joined, named, sentence, visible
 
 MAIN = (
@@ -65,21 +64,6 @@ class SpreadRow:
     units: str
     error: str
     bar: int  # percent of the widest bar
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ComparisonRow:
-    """One comparison as a reader sees it."""
-
-    condition: str
-    reference: str
-    quantity: str
-    ratio: Rounded
-    level: str
-    p_value: str
-    p_adjusted: str
-    p_permutation: str
-    problem: str
 
 
 def main_estimates(condition: ConditionResult) -> tuple[EstimateRow, ...]:
@@ -232,24 +216,6 @@ def _spread(item: LevelSpread, widest: float) -> SpreadRow:
         units=f"{item.units:,}",
         error=percent(item.relative_error),
         bar=bar,
-    )
-
-
-def comparison_rows(comparisons: Iterable[Comparison]) -> tuple[ComparisonRow, ...]:
-    """One row a comparison."""
-    return tuple(
-        ComparisonRow(
-            condition=named(c.condition),
-            reference=named(c.reference),
-            quantity=QUANTITIES[c.quantity].label if c.quantity in QUANTITIES else c.quantity,
-            ratio=rounded(c.ratio.value, c.ratio.low, c.ratio.high),
-            level=percent(c.ratio.level),
-            p_value=probability(c.p_value),
-            p_adjusted=probability(c.p_adjusted),
-            p_permutation=probability(c.p_permutation),
-            problem=c.problem,
-        )
-        for c in comparisons
     )
 
 

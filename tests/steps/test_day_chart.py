@@ -50,7 +50,7 @@ def test_a_day_out_of_control_is_found(made):
     assert chart.low < 0.78
     assert chart.high > 0.82
     (problem,) = study_problems([chart])
-    assert problem.startswith("day 6 is out of control: wt ran at 0.62 µm/s, -23% of its centre")
+    assert problem.startswith("day 6 is out of control: wt ran at 0.62 µm/s, 23% below its centre")
 
 
 def test_conditions_of_that_day_are_told_and_others_are_not(made):

@@ -113,7 +113,7 @@ def test_puromycin_through_the_step(made):
 def test_series_of_several_days(made):
     speeds = series()
     (curve,) = fitted(made(speeds), sheet({"atp_uM": numbers_of(speeds)}))
-    assert (curve.model, curve.label, curve.unit) == ("michaelis-menten", "atp", "µM")
+    assert (curve.model, curve.label, curve.unit) == ("michaelis-menten", "ATP", "µM")
     assert len(curve.points) == 18
     k, v = value(curve, "k_m_uM"), value(curve, "v_max_um_s")
     assert k.low < 50 < k.high
@@ -256,7 +256,7 @@ def test_too_few_points_for_a_curve_are_a_problem(made):
 @pytest.mark.parametrize(
     ("name", "label", "unit", "kind"),
     [
-        ("atp_uM", "atp", "µM", "concentration"),
+        ("atp_uM", "ATP", "µM", "concentration"),
         ("free_ca_nM", "free ca", "nM", "concentration"),
         ("temperature_C", "temperature", "°C", "temperature"),
         ("motor_ug_ml", "motor", "µg/ml", "density"),

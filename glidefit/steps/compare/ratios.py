@@ -94,19 +94,23 @@ def compare(
         names = f"{condition.condition}\n{reference.condition}".encode()
         rng = np.random.default_rng([seed, zlib.crc32(names)])
         for quantity in COMPARED:
-            found.append(_comparison(condition, reference, quantity, settings, level, rng))
+            found.append(
+                compare_in(quantity, condition, reference, settings=settings, level=level, rng=rng)
+            )
         pairs.append(_pair(condition, reference, level=level, filmed=filmed, rng=rng))
     return _adjusted(found), tuple(pairs)
 
 
-def _comparison(
+def compare_in(
+    quantity: str,
     condition: ConditionResult,
     reference: ConditionResult,
-    quantity: str,
+    *,
     settings: CompareSettings,
     level: float,
     rng: np.random.Generator,
 ) -> Comparison:
+    """One condition against its reference in one quantity, its p value not yet adjusted."""
     one, two = with_value(condition, quantity), with_value(reference, quantity)
     fields: dict[str, Any] = {
         "condition": condition.condition,

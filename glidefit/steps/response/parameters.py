@@ -111,6 +111,8 @@ def _parameter(
     problem: str,
 ) -> ResponseParameter:
     """On its own scale; a value that is not determined is none, but a bound may be."""
+    if not problem and not math.isfinite(bounds.error):
+        problem = f"{meaning.label} is not determined: the points leave the shape open"
     error = bounds.error * (back(bounds.value) if back is math.exp else 1.0)
     low = back(bounds.low) if math.isfinite(bounds.low) else NAN
     high = back(bounds.high) if math.isfinite(bounds.high) else NAN
@@ -164,21 +166,20 @@ def _scale_meaning(scale: str) -> _Meaning:
 
 
 def _meaning(shape: str, name: str, what: Column, inhibitor: Column | None) -> _Meaning:
-    suffix = what.name.removeprefix(what.label.replace(" ", "_"))
     if name == "half":
         label = "K" if shape == "hill" else "K_m"
-        return _Meaning(key=f"{label.lower()}{suffix}", label=label, unit=what.unit)
+        return _Meaning(key=f"{label.lower()}{what.suffix}", label=label, unit=what.unit)
     if name == "inhibition":
         unit = inhibitor.unit if inhibitor else ""
-        own = inhibitor.name.removeprefix(inhibitor.label.replace(" ", "_")) if inhibitor else ""
+        own = inhibitor.suffix if inhibitor else ""
         return _Meaning(key=f"k_i{own}", label="K_i", unit=unit)
     if name == "density":
-        return _Meaning(key=f"c_s{suffix}", label="c_s", unit=what.unit)
+        return _Meaning(key=f"c_s{what.suffix}", label="c_s", unit=what.unit)
     if name == "activation":
         return _Meaning(key="activation_energy_kJ_mol", label="E_a", unit="kJ/mol")
     if name == "slope":
         return _Meaning(
-            key=f"relative_slope_per{suffix or '_unit'}",
+            key=f"relative_slope_per{what.suffix or '_unit'}",
             label="b",
             unit=f"per {what.unit}" if what.unit else "",
         )

@@ -15,6 +15,7 @@ FEWEST_VALUES = 3
 
 _CONCENTRATION = re.compile("[pnuµμm]?M|ppm")
 _DENSITY = re.compile("[pnuµμm]?g_[muµμ]?[lL]|(per_)?[nuµμ]m2")
+_SPELLED = {"atp": "ATP", "adp": "ADP", "gtp": "GTP", "kcl": "KCl", "nacl": "NaCl"}
 _TEMPERATURES = frozenset({"C", "degC"})
 
 
@@ -32,6 +33,7 @@ class Column:
 
     name: str
     label: str
+    suffix: str  # of the name: "_uM"
     unit: str
     kind: str  # "concentration", "temperature", "density" or "other"
 
@@ -39,14 +41,16 @@ class Column:
 def column(name: str) -> Column:
     """A column from its name: "atp_uM" is a concentration in µM, "temperature_C" in °C."""
     parts = name.split("_")
-    for n in (3, 2, 1):
-        unit = "_".join(parts[-n:])
-        if len(parts) > n and (kind := _kind(unit)):
-            label = " ".join(parts[:-n])
-            return Column(name=name, label=label, unit=_pretty(unit), kind=kind)
-    if len(parts) == 1:
-        return Column(name=name, label=name, unit="", kind="other")
-    return Column(name=name, label=" ".join(parts[:-1]), unit=_pretty(parts[-1]), kind="other")
+    sizes = [n for n in (3, 2, 1) if n < len(parts)]
+    n = next((n for n in sizes if _kind("_".join(parts[-n:]))), min(1, len(sizes)))
+    unit = "_".join(parts[len(parts) - n :])
+    return Column(
+        name=name,
+        label=" ".join(_SPELLED.get(part.lower(), part) for part in parts[: len(parts) - n]),
+        suffix=f"_{unit}" if unit else "",
+        unit=_pretty(unit),
+        kind=_kind(unit) or "other",
+    )
 
 
 def _kind(unit: str) -> str:
