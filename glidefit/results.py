@@ -391,6 +391,7 @@ class DayChart:
     relative_sd: float  # of all days that are like the others
     days: tuple[ChartDay, ...]
     rules: str
+    problems: tuple[str, ...] = ()  # days out of control
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -89,6 +89,7 @@ def count_problems(result: StudyResult) -> int:
         + sum(len(r.problems) for r in result.recordings)
         + sum(len(p.problems) for p in result.pairs)
         + sum(len(r.problems) for r in result.responses)
+        + sum(len(c.problems) for c in result.day_charts)
     )
 
 

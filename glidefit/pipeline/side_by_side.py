@@ -27,7 +27,6 @@ class SideBySide:
     pairs: tuple[ConditionPair, ...]
     responses: tuple[ResponseCurve, ...]
     day_charts: tuple[DayChart, ...]
-    problems: tuple[str, ...]
 
 
 def check_names(assay: Assay, settings: SourcedSettings) -> None:
@@ -111,7 +110,6 @@ def side_by_side(
         pairs=day_chart.with_pair_problems(pairs, conditions, charts),
         responses=curves,
         day_charts=charts,
-        problems=day_chart.study_problems(charts),
     )
 
 

@@ -82,7 +82,7 @@ def study(
         day_charts=beside.day_charts,
         recordings=tuple(recording_results),
         settings=_setting_rows(settings),
-        problems=(*same_fields(recordings), *beside.problems),
+        problems=tuple(same_fields(recordings)),
         seed=seed,
         version=glidefit.__version__,
         sheet_sha256=sheet_sha256,

@@ -42,7 +42,7 @@ def _chart(condition: ConditionResult, days: Mapping[str, Sequence[float]]) -> D
     names = sorted(days, key=natural_order)
     values = [float(np.mean(days[day])) for day in names]
     chart = individuals_chart(np.array(values))
-    return DayChart(
+    made = DayChart(
         condition=condition.condition,
         control=condition.control,
         quantity=_QUANTITY,
@@ -57,6 +57,8 @@ def _chart(condition: ConditionResult, days: Mapping[str, Sequence[float]]) -> D
         ),
         rules=RULES,
     )
+    told = tuple(f"{d.day} is out of control: {_what(made, d)}." for d in made.days if d.signals)
+    return dataclasses.replace(made, problems=told)
 
 
 def natural_order(label: str) -> tuple[tuple[int, int, str], ...]:
@@ -89,16 +91,6 @@ def _what(chart: DayChart, day: ChartDay) -> str:
         f"{chart.condition} ran at {day.value:.3g} µm/s, {abs(off):.0%} "
         f"{'above' if off > 0 else 'below'} its centre line {chart.centre:.3g} "
         f"(limits {chart.low:.3g} to {chart.high:.3g}): {', '.join(day.signals)}"
-    )
-
-
-def study_problems(charts: Sequence[DayChart]) -> tuple[str, ...]:
-    """Days out of control, for the index; of conditions that are no control too."""
-    return tuple(
-        f"{day.day} is out of control: {_what(chart, day)}."
-        for chart in charts
-        for day in chart.days
-        if day.signals
     )
 
 

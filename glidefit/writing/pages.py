@@ -78,6 +78,7 @@ def index_page(study: StudyResult) -> str:
         tracks_seen=sum(c.counts.tracks_seen for c in study.conditions),
         figures=overview(study.conditions),
         caption=overview_caption(study.conditions),
+        problems=[*study.problems, *(p for c in study.day_charts for p in c.problems)],
         said=said(study),
         responses=[response_sentence(curve) for curve in study.responses],
         day_charts=[day_figure(chart, number=n) for n, chart in enumerate(study.day_charts)],

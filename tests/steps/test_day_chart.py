@@ -13,7 +13,6 @@ from glidefit.results import ConditionPair
 from glidefit.steps.day_chart import (
     day_charts,
     natural_order,
-    study_problems,
     with_pair_problems,
     with_problems,
 )
@@ -49,7 +48,7 @@ def test_a_day_out_of_control_is_found(made):
     assert_allclose(chart.centre, np.delete(SPEEDS, 5).mean())
     assert chart.low < 0.78
     assert chart.high > 0.82
-    (problem,) = study_problems([chart])
+    (problem,) = chart.problems
     assert problem.startswith("day 6 is out of control: wt ran at 0.62 µm/s, 23% below its centre")
 
 
@@ -82,7 +81,7 @@ def test_a_condition_that_is_no_control_has_a_chart_but_judges_no_other(made):
     condition, other = made("mutant", SPEEDS), made("other", SPEEDS[:2], first=6)
     charts = day_charts([condition, other])
     assert [c.condition for c in charts] == ["mutant"]
-    assert len(study_problems(charts)) == 1
+    assert len(charts[0].problems) == 1
     assert [c.problems for c in with_problems([condition, other], charts)] == [(), ()]
 
 

@@ -441,6 +441,7 @@ def make_chart(text: str) -> DayChart:
         relative_sd=0.03,
         days=days,
         rules=text,
+        problems=(text,),
     )
 
 
