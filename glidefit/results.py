@@ -102,6 +102,7 @@ class TrackResult:
     rotational_diffusion_high_rad2_s: float = NAN
     rotational_diffusion_problem: str = ""  # why a kept track has none
     gliding_probability: float = NAN  # that it glides rather than rests, pivots or floats
+    length_um: float = NAN  # median length of the contour; NaN if the table has none
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -263,17 +264,169 @@ class Ratio:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Difference:
+    """A difference from the reference, with its interval and the p value that belongs to it."""
+
+    value: float = NAN
+    low: float = NAN
+    high: float = NAN
+    level: float = 0.95
+    p_value: float = NAN
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class UnitChange:
+    """What one day (or one chamber of a single day) says of a comparison by itself."""
+
+    day: str
+    chamber: str  # "" for a whole day
+    change: float  # ratio to the reference; of a fraction the difference
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Comparison:
-    """One condition against its reference in one quantity."""
+    """One condition against its reference in one quantity.
+
+    A quantity has a ratio with its p value, or, if it is a fraction, a difference with its own.
+    """
 
     condition: str
     reference: str
     quantity: str
     ratio: Ratio
     p_value: float
-    p_adjusted: float
-    p_permutation: float
+    p_adjusted: float  # over all comparisons in the primary quantity; NaN in the others
+    p_permutation: float  # NaN where the design could never reject
     problem: str
+    difference: Difference = dataclasses.field(default_factory=Difference)
+    primary: bool = False
+    smallest_p_permutation: float = NAN  # that the design can give
+    equivalence_low: float = NAN  # of the ratio or difference, at the level of equivalence
+    equivalence_high: float = NAN
+    equivalence_level: float = NAN
+    margin: float = NAN
+    equivalent: bool = False  # shown to lie within the margin
+    degrees_of_freedom: float = NAN
+    covers: str = ""  # level to which the interval generalises: "days", "chambers" or ""
+    method: str = ""
+    units: tuple[UnitChange, ...] = ()  # of paired designs
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SideLook:
+    """The ratio of speeds looked at in another way."""
+
+    name: str
+    ratio: Ratio
+    meaning: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ConditionPair:
+    """How a condition and its reference were compared, whatever the quantity."""
+
+    condition: str
+    reference: str
+    paired: bool
+    covers: str
+    shared_days: int
+    days: int
+    reference_days: int
+    note: str  # how it was judged, and what that costs
+    problems: tuple[str, ...] = ()
+    side_looks: tuple[SideLook, ...] = ()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResponsePoint:
+    """The value of one condition on one day, or in one chamber of a single day."""
+
+    condition: str
+    day: str
+    chamber: str  # "" for a whole day
+    x: float
+    inhibitor: float  # NaN without one
+    value: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResponseParameter:
+    """One parameter of a curve; NaN ends are open."""
+
+    key: str
+    label: str
+    unit: str
+    value: float
+    low: float
+    high: float
+    level: float
+    error: float  # standard error
+    method: str
+    problem: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResponseModel:
+    """One curve that was tried."""
+
+    name: str
+    formula: str
+    criterion: float  # Akaike's, for small samples; NaN if it was not fitted
+    residual_sd: float
+    chosen: bool
+    problem: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResponseCurve:
+    """Speed against a column of numbers: points, the chosen curve with its band, parameters."""
+
+    column: str
+    label: str
+    unit: str
+    series: str  # "" if there is one
+    quantity: str
+    model: str  # "" if none could be fitted
+    formula: str
+    points: tuple[ResponsePoint, ...]
+    x: tuple[float, ...]
+    at_inhibitor: tuple[float, ...]  # at which each piece of the curve is drawn; NaN without one
+    curve: tuple[float, ...]
+    low: tuple[float, ...]
+    high: tuple[float, ...]
+    level: float
+    covers: str
+    parameters: tuple[ResponseParameter, ...]
+    models: tuple[ResponseModel, ...]
+    method: str
+    problems: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ChartDay:
+    """One day of a chart."""
+
+    day: str
+    value: float
+    chambers: int
+    signals: tuple[str, ...]  # rules that it breaks
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DayChart:
+    """One condition day by day, with centre line and limits."""
+
+    condition: str
+    control: bool
+    quantity: str
+    centre: float
+    low: float
+    high: float
+    relative_sigma: float  # from successive days
+    relative_sd: float  # of all days that are like the others
+    days: tuple[ChartDay, ...]
+    rules: str
+    problems: tuple[str, ...] = ()  # days out of control
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -300,6 +453,9 @@ class StudyResult:
     seed: int
     version: str
     sheet_sha256: str
+    pairs: tuple[ConditionPair, ...] = ()
+    responses: tuple[ResponseCurve, ...] = ()
+    day_charts: tuple[DayChart, ...] = ()
     format: str = FORMAT
 
     def to_json(self) -> dict[str, Any]:
@@ -342,7 +498,11 @@ def _record(kind: type[_Record], data: dict[str, Any]) -> _Record:
     hints = typing.get_type_hints(kind)
     fields = dataclasses.fields(kind)  # type: ignore[arg-type]
     # A key with a default was added later: earlier results do not have it.
-    needed = [f.name for f in fields if f.default is dataclasses.MISSING]
+    needed = [
+        f.name
+        for f in fields
+        if f.default is dataclasses.MISSING and f.default_factory is dataclasses.MISSING
+    ]
     if missing := [name for name in needed if name not in data]:
         raise ValueError(f"{kind.__name__}: key {missing[0]!r} is missing")
     there = [f.name for f in fields if f.name in data]

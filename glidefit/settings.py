@@ -166,6 +166,57 @@ class IntervalSettings(_Section):
     resamples: int = setting(2000, "", "Bootstrap resamples.", ge=200, le=100_000)
 
 
+class CompareSettings(_Section):
+    """Which conditions are compared, and what is tested first."""
+
+    reference: str = setting(
+        "control",
+        "",
+        "What conditions are compared with: the control, one condition by its name, or each with "
+        "each (all).",
+    )
+    primary: Literal[
+        "speed_um_s", "rotational_diffusion_rad2_s", "persistence_length_um", "motile_fraction"
+    ] = setting(
+        "speed_um_s",
+        "",
+        "The quantity whose p values are adjusted for the number of comparisons; the others are "
+        "secondary.",
+    )
+    margin: float = setting(
+        0.1,
+        "",
+        "Two conditions count as alike within this share when the 90 % interval says so.",
+        gt=0,
+        lt=1,
+    )
+
+
+class ResponseSettings(_Section):
+    """Curves of speed against a column of numbers of the assay sheet."""
+
+    column: str | None = setting(
+        None,
+        "",
+        "Column of the assay sheet to draw against; if not given, every one with three values or "
+        "more.",
+    )
+    model: Literal[
+        "auto", "michaelis-menten", "hill", "competitive", "arrhenius", "saturation", "linear"
+    ] = setting("auto", "", "The curve; auto compares those that suit the unit of the column.")
+    inhibitor: str | None = setting(
+        None, "", "Column with the concentration of a competitive inhibitor, for that curve."
+    )
+    series: str | None = setting(
+        None, "", "Column of labels that parts the conditions into series, each with its own curve."
+    )
+    scatter: Literal["relative", "constant"] = setting(
+        "relative",
+        "",
+        "Whether points scatter about the curve by a share of it, or alike everywhere.",
+    )
+
+
 class PageSettings(_Section):
     """What the pages show."""
 
@@ -183,6 +234,8 @@ class Settings(_Section):
     clean: CleanSettings = Field(default_factory=CleanSettings)
     fit: FitSettings = Field(default_factory=FitSettings)
     interval: IntervalSettings = Field(default_factory=IntervalSettings)
+    compare: CompareSettings = Field(default_factory=CompareSettings)
+    response: ResponseSettings = Field(default_factory=ResponseSettings)
     page: PageSettings = Field(default_factory=PageSettings)
 
 

@@ -177,11 +177,42 @@ def _record(kind: type[Any], data: Any, where: str, errors: list[InputError]) ->
                 _record(ScenarioCondition, item, f"{where}, condition {n + 1}", errors)
                 for n, item in enumerate(items)
             )
+        elif key == "columns" and kind is ScenarioCondition:
+            values[key] = _columns(value, f"{where}, columns", errors)
         elif dataclasses.is_dataclass(hints[key]):
             values[key] = _record(hints[key], value, f"{where}.{key}", errors)
         else:
             values[key] = _value(hints[key], value, f"{where}, {key}", errors)
     return _made(kind, values, where, errors) if len(errors) == before else None
+
+
+def _columns(data: Any, where: str, errors: list[InputError]) -> tuple[tuple[str, str], ...]:
+    """More columns of the sheet, numbers and text alike."""
+    from glidefit.reading.sheet_columns import KNOWN
+
+    if not isinstance(data, Mapping):
+        errors.append(
+            InputError(
+                where,
+                f"the value is {data!r}",
+                expected="columns with their values",
+                remedy="For example { atp_uM = 10 }.",
+            )
+        )
+        return ()
+    for name, value in data.items():
+        if name in KNOWN or not (_is_number(value) or isinstance(value, str)):
+            errors.append(
+                InputError(
+                    f"{where}, {name}",
+                    f"the value is {value!r}",
+                    expected="a number or text, in a column that the sheet does not have itself",
+                    remedy="Name the column otherwise." if name in KNOWN else "Correct the value.",
+                )
+            )
+    return tuple(
+        (name, f"{value:.10g}" if _is_number(value) else str(value)) for name, value in data.items()
+    )
 
 
 def _made(kind: type[Any], values: dict[str, Any], where: str, errors: list[InputError]) -> Any:

@@ -18,6 +18,14 @@ def pages_of(result: StudyResult) -> dict[str, str]:
     pages = {"index.html": index_page(result)}
     for condition in result.conditions:
         pages[f"conditions/{condition.slug}.html"] = condition_page(result, condition)
+    if result.comparisons:
+        from glidefit.writing.comparison_page import comparison_page
+
+        pages["comparison.html"] = comparison_page(result)
+    if result.responses:
+        from glidefit.writing.response_page import response_page
+
+        pages["response.html"] = response_page(result)
     return pages
 
 

@@ -13,6 +13,7 @@ import glidefit
 from glidefit.assay import Assay, Recording
 from glidefit.errors import InputError, InputErrors, input_errors
 from glidefit.pipeline.prepare import Prepared, Task, prepare
+from glidefit.pipeline.side_by_side import check_names
 from glidefit.pipeline.study import study
 from glidefit.results import StudyResult
 from glidefit.running import folder as run_folder
@@ -57,6 +58,7 @@ def fit(job: Job) -> Done:
 def _analyse(job: Job, *, pages: bool) -> Done:
     run_folder.check_output(job.out)
     assay = read_assay(job.sheets)
+    check_names(assay, job.settings)
     if not pages:
         _only_tables(assay)
     prepared = prepare_all(assay, job)
@@ -80,11 +82,14 @@ def _analyse(job: Job, *, pages: bool) -> Done:
 
 
 def count_problems(result: StudyResult) -> int:
-    """Problems of the study, its conditions, recordings and estimates that wait to be read."""
+    """Problems of the study and all its parts that wait to be read."""
     return (
         len(result.problems)
         + sum(len(c.problems) for c in result.conditions)
         + sum(len(r.problems) for r in result.recordings)
+        + sum(len(p.problems) for p in result.pairs)
+        + sum(len(r.problems) for r in result.responses)
+        + sum(len(c.problems) for c in result.day_charts)
     )
 
 
@@ -247,6 +252,7 @@ def _study(assay: Assay, prepared: list[Prepared], job: Job) -> StudyResult:
         settings=job.settings,
         seed=job.seed,
         sheet_sha256="+".join(sha256(sheet) for sheet in job.sheets),
+        sheet=assay.recordings,
     )
 
 
@@ -263,6 +269,7 @@ def _tables(result: StudyResult, prepared: list[Prepared]) -> dict[str, str]:
         "tables/per_track.csv": tables.per_track_table(result),
         "tables/estimates.csv": tables.estimates_table(result),
         "tables/comparisons.csv": tables.comparisons_table(result),
+        "tables/response.csv": tables.response_table(result),
     }
 
 

@@ -139,6 +139,7 @@ def _written(folder: Path, film: _Film, name: str) -> dict[str, str]:
         "field": recording.field,
         "minutes": f"{recording.minutes:g}",
         "control": "yes" if recording.control else "",
+        **dict(recording.columns),
     }
     video = f"videos/{name}.ome.tif"
     if film.part.filament_video is not None:

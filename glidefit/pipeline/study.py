@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 import glidefit
+from glidefit.assay import Recording
 from glidefit.errors import NothingLeft
 from glidefit.evidence import (
     REASONS,
@@ -19,6 +20,7 @@ from glidefit.evidence import (
     CleanRecording,
     Combined,
 )
+from glidefit.pipeline.side_by_side import side_by_side
 from glidefit.results import ConditionResult, Estimate, RecordingResult, SettingRow, StudyResult
 from glidefit.settings import Settings, SourcedSettings, declarations
 
@@ -36,6 +38,7 @@ def study(
     settings: SourcedSettings,
     seed: int,
     sheet_sha256: str,
+    sheet: Sequence[Recording] = (),
 ) -> StudyResult:
     """Fit every condition and put the study together.
 
@@ -52,6 +55,8 @@ def study(
     settings : SourcedSettings
     seed : int
     sheet_sha256 : str
+    sheet : sequence of Recording
+        Rows of the sheet: start times, and columns of numbers for response curves.
 
     Raises
     ------
@@ -88,10 +93,14 @@ def study(
     ]
     if all(result.model == "none" for result in results):
         raise NothingLeft("\n".join(result.problems[0] for result in results))
+    beside = side_by_side(results, sheet, settings=settings.values, seed=seed)
     return StudyResult(
         name=name,
-        conditions=tuple(_with_variation(results, seed=seed)),
-        comparisons=(),
+        conditions=tuple(_with_variation(beside.conditions, seed=seed)),
+        comparisons=beside.comparisons,
+        pairs=beside.pairs,
+        responses=beside.responses,
+        day_charts=beside.day_charts,
         recordings=tuple(recording_results),
         settings=_setting_rows(settings),
         problems=tuple(same_fields(recordings)),

@@ -16,7 +16,7 @@ MARK = "results.json"
 _FORMAT_PREFIX = "glidefit-"
 # What a run writes, by folder. Anything else in a report is somebody's own and not replaced.
 _WRITTEN = {
-    "": ("index.html", MARK, "provenance.json", "*.eln"),
+    "": ("index.html", "comparison.html", "response.html", MARK, "provenance.json", "*.eln"),
     "conditions": ("*.html",),
     "recordings": ("*.html",),
     "tables": ("*.csv",),

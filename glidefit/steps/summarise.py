@@ -158,6 +158,7 @@ def tracks(
         duration = t.time_s[last] - t.time_s[first]
         net = np.hypot(t.x_um[last] - t.x_um[first], t.y_um[last] - t.y_um[first])
         speed, error = np.full(t.n_tracks, np.nan), np.full(t.n_tracks, np.nan)
+        length = _median_lengths(r)
         if r.recording in speeds:
             speed[kept], error[kept] = speeds[r.recording]
         own = diffusions.get(r.recording)
@@ -183,10 +184,23 @@ def tracks(
                 rotational_diffusion_high_rad2_s=_short(turning[2, k]),
                 rotational_diffusion_problem=str(problem[k]),
                 gliding_probability=_short(r.clean.gliding_probability[k]),
+                length_um=_short(length[k]),
             )
             for k in range(t.n_tracks)
         ]
     return tuple(out)
+
+
+def _median_lengths(recording: CleanRecording) -> Floats:
+    """Median length of the contour of each track, (m,); NaN without one."""
+    t = recording.clean.tracks
+    out = np.full(t.n_tracks, np.nan)
+    if t.length_um is not None:
+        for k in range(t.n_tracks):
+            own = t.length_um[t.rows(k)]
+            own = own[np.isfinite(own)]
+            out[k] = np.median(own) if len(own) else np.nan
+    return out
 
 
 def _short(value: float) -> float:

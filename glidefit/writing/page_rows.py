@@ -8,7 +8,6 @@ from dataclasses import dataclass
 
 from glidefit.quantities import QUANTITIES, Quantity
 from glidefit.results import (
-    Comparison,
     ConditionResult,
     Drift,
     Estimate,
@@ -19,7 +18,7 @@ from glidefit.results import (
     TrackResult,
     VariancePart,
 )
-from glidefit.writing.rounding import NONE, Rounded, percent, probability, rounded, significant
+from glidefit.writing.rounding import NONE, Rounded, percent, rounded, significant
 from glidefit.writing.wording import counted, joined, named, sentence, visible
 
 MAIN = (
@@ -78,21 +77,6 @@ class VariationRow:
     sd: str
     interval: str
     share: str
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class ComparisonRow:
-    """One comparison as a reader sees it."""
-
-    condition: str
-    reference: str
-    quantity: str
-    ratio: Rounded
-    level: str
-    p_value: str
-    p_adjusted: str
-    p_permutation: str
-    problem: str
 
 
 def main_estimates(condition: ConditionResult) -> tuple[EstimateRow, ...]:
@@ -280,24 +264,6 @@ def variation_tables(
             ),
         )
         for key, parts in by_quantity.items()
-    )
-
-
-def comparison_rows(comparisons: Iterable[Comparison]) -> tuple[ComparisonRow, ...]:
-    """One row a comparison."""
-    return tuple(
-        ComparisonRow(
-            condition=named(c.condition),
-            reference=named(c.reference),
-            quantity=QUANTITIES[c.quantity].label if c.quantity in QUANTITIES else c.quantity,
-            ratio=rounded(c.ratio.value, c.ratio.low, c.ratio.high),
-            level=percent(c.ratio.level),
-            p_value=probability(c.p_value),
-            p_adjusted=probability(c.p_adjusted),
-            p_permutation=probability(c.p_permutation),
-            problem=c.problem,
-        )
-        for c in comparisons
     )
 
 

@@ -19,6 +19,9 @@ from markupsafe import Markup
 from glidefit.results import ConditionResult, StudyResult
 from glidefit.writing import page_rows
 from glidefit.writing.colours import DARK, LIGHT, page_colour, style_variables
+from glidefit.writing.comparison_rows import said
+from glidefit.writing.comparison_words import response_sentence
+from glidefit.writing.day_figures import day_figure
 from glidefit.writing.figures import condition_figures, overview, overview_caption
 from glidefit.writing.rounding import percent, rounded, significant
 from glidefit.writing.set_aside_rules import outcomes
@@ -77,7 +80,11 @@ def index_page(study: StudyResult) -> str:
         tracks_seen=sum(c.counts.tracks_seen for c in study.conditions),
         figures=overview(study.conditions),
         caption=overview_caption(study.conditions),
-        comparisons=page_rows.comparison_rows(study.comparisons),
+        problems=[*study.problems, *(p for c in study.day_charts for p in c.problems)],
+        said=said(study),
+        responses=[response_sentence(curve) for curve in study.responses],
+        day_charts=[day_figure(chart, number=n) for n, chart in enumerate(study.day_charts)],
+        day_rules=study.day_charts[0].rules if study.day_charts else "",
     )
 
 

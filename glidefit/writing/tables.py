@@ -84,11 +84,47 @@ def comparisons_table(study: StudyResult) -> str:
     whose = ("condition", "reference", "quantity")
     ratio = ("value", "low", "high", "level")
     tests = ("p_value", "p_adjusted", "p_permutation", "problem")
+    difference = ("value", "low", "high", "p_value")
+    more = (
+        "primary",
+        "smallest_p_permutation",
+        "equivalence_low",
+        "equivalence_high",
+        "equivalence_level",
+        "margin",
+        "equivalent",
+        "degrees_of_freedom",
+        "covers",
+        "method",
+    )
     rows = [
-        [*_columns(c, whose), *_columns(c.ratio, ratio), *_columns(c, tests)]
+        [
+            *_columns(c, whose),
+            *_columns(c.ratio, ratio),
+            *_columns(c, tests),
+            *_columns(c.difference, difference),
+            *_columns(c, more),
+        ]
         for c in study.comparisons
     ]
-    return table_text([*whose, "ratio", "ratio_low", "ratio_high", "level", *tests], rows)
+    head = [*whose, "ratio", "ratio_low", "ratio_high", "level", *tests]
+    head += ["difference", "difference_low", "difference_high", "difference_p_value", *more]
+    return table_text(head, rows)
+
+
+def response_table(study: StudyResult) -> str:
+    """One row a parameter of a response curve, and one a curve that was tried."""
+    whose = ("column", "series", "quantity")
+    names = ("key", "unit", "value", "low", "high", "level", "error", "method", "problem")
+    rows: list[list[Cell]] = []
+    for curve in study.responses:
+        own = _columns(curve, whose)
+        rows += [[*own, curve.model, *_columns(p, names), math.nan] for p in curve.parameters]
+        rows += [
+            [*own, m.name, "criterion", "", *[math.nan] * 5, "", m.problem, m.criterion]
+            for m in curve.models
+        ]
+    return table_text([*whose, "model", "parameter", *names[1:], "criterion"], rows)
 
 
 def tracks_table(recordings: Iterable[TrackRows]) -> str:

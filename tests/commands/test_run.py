@@ -11,6 +11,7 @@ import pytest
 from numpy.testing import assert_allclose
 
 TABLES = ("tracks.csv", "set_aside.csv", "per_track.csv", "estimates.csv", "comparisons.csv")
+TABLES += ("response.csv",)
 
 
 def results(desk, folder="reports/tables"):
@@ -51,6 +52,7 @@ def first_run(desk, study, once):
 def test_files_of_a_run(first_run):
     assert first_run["files"].keys() == {
         "index.html",
+        "comparison.html",
         "conditions/control.html",
         "conditions/mutant.html",
         *(f"tables/{name}" for name in TABLES),

@@ -5,7 +5,9 @@ from __future__ import annotations
 import dataclasses
 import itertools
 import math
+import re
 from collections.abc import Callable, Sequence
+from html.parser import HTMLParser
 
 import numpy as np
 import pytest
@@ -13,10 +15,13 @@ import pytest
 from glidefit.quantities import QUANTITIES
 from glidefit.results import (
     ChamberResult,
+    ChartDay,
     Comparison,
+    ConditionPair,
     ConditionResult,
     Counts,
     Curve,
+    DayChart,
     DrawnTrack,
     Drift,
     Estimate,
@@ -24,7 +29,12 @@ from glidefit.results import (
     ModelCheck,
     Ratio,
     RecordingResult,
+    ResponseCurve,
+    ResponseModel,
+    ResponseParameter,
+    ResponsePoint,
     SettingRow,
+    SideLook,
     StudyResult,
     TimePoint,
     TrackResult,
@@ -381,6 +391,83 @@ def make_comparison(condition: str, reference: str) -> Comparison:
     )
 
 
+def make_pair(text: str) -> ConditionPair:
+    """A pair with this text everywhere."""
+    return ConditionPair(
+        condition=text,
+        reference=text,
+        paired=True,
+        covers=text,
+        shared_days=2,
+        days=2,
+        reference_days=2,
+        note=text,
+        problems=(text,),
+        side_looks=(
+            SideLook(name=text, ratio=Ratio(value=1, low=0.9, high=1.1, level=0.95), meaning=text),
+        ),
+    )
+
+
+def make_curve(text: str) -> ResponseCurve:
+    """A curve with this text everywhere."""
+    points = tuple(
+        ResponsePoint(condition=text, day=text, chamber=text, x=x, inhibitor=NAN, value=0.1 * x)
+        for x in (1.0, 2.0, 3.0)
+    )
+    parameter = ResponseParameter(
+        key=text,
+        label=text,
+        unit=text,
+        value=1,
+        low=0.5,
+        high=2,
+        level=0.95,
+        error=0.3,
+        method=text,
+        problem=text,
+    )
+    model = ResponseModel(
+        name=text, formula=text, criterion=3.0, residual_sd=0.1, chosen=True, problem=text
+    )
+    names = ("column", "label", "unit", "series", "quantity", "model", "formula", "method")
+    return ResponseCurve(
+        **dict.fromkeys(names, text),
+        points=points,
+        x=(1.0, 3.0),
+        at_inhibitor=(NAN, NAN),
+        curve=(0.1, 0.3),
+        low=(0.05, 0.2),
+        high=(0.2, 0.4),
+        level=0.95,
+        covers=text,
+        parameters=(parameter,),
+        models=(model,),
+        problems=(text,),
+    )
+
+
+def make_chart(text: str) -> DayChart:
+    """A chart with this text everywhere."""
+    days = tuple(
+        ChartDay(day=f"{text} {n}", value=0.8 + 0.01 * n, chambers=1, signals=(text,))
+        for n in range(5)
+    )
+    return DayChart(
+        condition=text,
+        control=True,
+        quantity=text,
+        centre=0.8,
+        low=0.7,
+        high=0.9,
+        relative_sigma=0.03,
+        relative_sd=0.03,
+        days=days,
+        rules=text,
+        problems=(text,),
+    )
+
+
 def empty(condition: ConditionResult) -> ConditionResult:
     """The condition when cleaning has left nothing."""
     counts = dataclasses.replace(
@@ -490,8 +577,120 @@ def hostile() -> StudyResult:
         conditions=tuple(conditions),
         recordings=tuple(recordings),
         comparisons=(replace(make_comparison(text, text), quantity=text, problem=text),),
+        pairs=(make_pair(text),),
+        responses=(make_curve(text),),
+        day_charts=(make_chart(text),),
         settings=tuple(replace(s, value=text, unit=text, help=text) for s in study.settings),
         problems=(text,),
         version=text,
         sheet_sha256=text,
+    )
+
+
+class PageReader(HTMLParser):
+    """Reads a page strictly: every tag closed where it belongs, every attribute quoted."""
+
+    VOID = frozenset({"meta", "br", "link", "img", "hr", "input", "wbr"})
+    QUOTED = re.compile(r"<[\w:-]+(\s+[\w:-]+=(\"[^\"<>]*\"|'[^'<>]*'))*\s*/?>")
+
+    def __init__(self):
+        super().__init__(convert_charrefs=True)
+        self.open = []
+        self.elements = []
+        self.faults = []
+        self.words = []
+
+    def handle_starttag(self, tag, attrs):
+        self._element(tag, attrs)
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self._element(tag, attrs)
+
+    def _element(self, tag, attrs):
+        source = self.get_starttag_text() or ""
+        if not self.QUOTED.fullmatch(source):
+            self.faults.append(f"not quoted: {source}")
+        if len({name for name, _ in attrs}) != len(attrs):
+            self.faults.append(f"attribute twice: {source}")
+        self.elements.append((tag, dict(attrs)))
+
+    def handle_endtag(self, tag):
+        if not self.open or self.open.pop() != tag:
+            self.faults.append(f"</{tag}> closes nothing")
+
+    def handle_data(self, data):
+        inside = self.open[-1] if self.open else ""
+        said = inside in {"title", "desc"} and self.open[-2:-1] == ["svg"]
+        drawn = "svg" in self.open and not said
+        if inside not in {"style", "script"} and not drawn and data.strip():
+            self.words.append(" ".join(data.split()))
+
+    @property
+    def ids(self):
+        """Every id of the page."""
+        return [attrs["id"] for _, attrs in self.elements if "id" in attrs]
+
+    def of(self, tag) -> list[dict[str, str]]:
+        """Attributes of every element with this tag."""
+        return [attrs for name, attrs in self.elements if name == tag]
+
+
+@pytest.fixture(scope="session")
+def read_page():
+    """Read a page and fail if it is not well formed."""
+
+    def read(text):
+        reader = PageReader()
+        reader.feed(text)
+        reader.close()
+        assert reader.faults == []
+        assert reader.open == []
+        assert len(set(reader.ids)) == len(reader.ids)
+        return reader
+
+    return read
+
+
+@pytest.fixture(scope="session")
+def compared() -> StudyResult:
+    """Three conditions of six days compared, along a curve, and day by day."""
+    from glidefit.settings import CompareSettings, ResponseSettings
+    from glidefit.steps.compare import FilmedAt, compare
+    from glidefit.steps.day_chart import day_charts
+    from glidefit.steps.response import SheetColumns, responses
+
+    names = ("wild type", "mutant", "mutant, 10 µM")
+    size = Size(days=6, chambers=2, recordings=1, tracks=4)
+    study = make_study(names, size=size, control="wild type")
+    first = study.conditions[0]
+    slow = [
+        dataclasses.replace(r, speed_um_s=0.4 * r.speed_um_s) if r.day == "2026-03-05" else r
+        for r in first.chambers
+    ]
+    conditions = (dataclasses.replace(first, chambers=tuple(slow)), *study.conditions[1:])
+    order = [
+        FilmedAt(condition=name, clock=f"day {d}", minutes=60.0 * n)
+        for d in range(6)
+        for n, name in enumerate(names)
+    ]
+    comparisons, pairs = compare(
+        conditions, settings=CompareSettings(), level=0.95, seed=1, filmed=order
+    )
+    columns = {
+        name: SheetColumns(numbers={"atp_uM": (x,)}, labels={})
+        for name, x in zip(names, (1000.0, 100.0, 10.0), strict=True)
+    }
+    curves = responses(conditions, columns, settings=ResponseSettings(), level=0.95)
+    undetermined = responses(
+        conditions, columns, settings=ResponseSettings(model="hill", column="atp_uM"), level=0.95
+    )
+    return dataclasses.replace(
+        study,
+        conditions=conditions,
+        comparisons=comparisons,
+        pairs=pairs,
+        responses=(*curves, *undetermined),
+        day_charts=day_charts(conditions),
     )

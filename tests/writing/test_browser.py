@@ -6,7 +6,9 @@ import shutil
 
 import pytest
 
+from glidefit.writing.comparison_page import comparison_page
 from glidefit.writing.pages import condition_page, index_page
+from glidefit.writing.response_page import response_page
 
 pytestmark = pytest.mark.browser
 
@@ -35,7 +37,7 @@ def browser():
 
 
 @pytest.fixture(scope="module")
-def pages(study, hostile, emptied, invented, sized, tmp_path_factory):
+def pages(study, hostile, compared, emptied, invented, sized, tmp_path_factory):
     """Files of pages: usual, hostile, with nothing left, with much of everything."""
     much = invented(
         [f"construct {n} with a name that goes on to {n} mM" for n in range(30)],
@@ -49,6 +51,11 @@ def pages(study, hostile, emptied, invented, sized, tmp_path_factory):
         "hostile": condition_page(hostile, hostile.conditions[0]),
         "hostile-index": index_page(hostile),
         "nothing": condition_page(study, emptied(study.conditions[0])),
+        "comparison": comparison_page(compared),
+        "response": response_page(compared),
+        "compared-index": index_page(compared),
+        "hostile-comparison": comparison_page(hostile),
+        "hostile-response": response_page(hostile),
         "much": condition_page(much, much.conditions[0]),
         "much-index": index_page(much),
     }
@@ -79,6 +86,7 @@ def watched(browser):
 
 
 NAMES = ["condition", "index", "hostile", "hostile-index", "nothing", "much", "much-index"]
+NAMES += ["comparison", "response", "compared-index", "hostile-comparison", "hostile-response"]
 
 
 @pytest.mark.parametrize("name", NAMES)

@@ -127,12 +127,6 @@ def test_problems_of_a_condition_and_its_recordings_are_counted(study):
     assert page_rows.problem_count(study.conditions[1], (noisy, *study.recordings[1:])) == 0
 
 
-def test_comparison_is_rounded_by_its_interval(compare):
-    row = page_rows.comparison_rows([compare("a", "b")])[0]
-    assert (str(row.ratio), row.level) == ("1.12 (1.03 to 1.22)", "95 %")
-    assert (row.p_value, row.p_adjusted, row.p_permutation) == ("0.013", "0.026", "–")
-
-
 def test_own_values_of_tracks_say_how_well_a_track_knows_them(study):
     tracks = study.conditions[0].tracks
     assert page_rows.own_values(tracks) == ""

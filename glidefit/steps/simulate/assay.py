@@ -12,7 +12,6 @@ from glidefit.steps.simulate.recording import factors, simulate_recording, track
 from glidefit.steps.simulate.scenario import LevelTruth, Scenario, ScenarioCondition
 from glidefit.tracks import Tracks
 
-_FIRST_DAY = date(2026, 3, 2)
 _FIRST_MINUTES, _MINUTES_A_RECORDING = 2.0, 5.0
 
 
@@ -23,6 +22,7 @@ class SimulatedRecording:
     name: str
     condition: str
     control: bool
+    columns: tuple[tuple[str, str], ...]
     day: str
     chamber: str  # unique within its day
     field: str
@@ -88,6 +88,8 @@ def _simulate_day(
     """The recordings of one day; the chambers of the conditions follow each other in turn."""
     filaments = scenario.filaments_of_day[number]
     shared = factors("day", scenario, rng=rng)
+    if scenario.day_speed_factors:
+        shared = (shared[0] * scenario.day_speed_factors[number], shared[1])
     today = [_moved(condition, scenario, "day", rng=rng) for condition in scenario.conditions]
     streams = rng.spawn(len(scenario.conditions))
     own = [
@@ -105,7 +107,7 @@ def _simulate_day(
             recordings += _simulate_chamber(
                 replace(scenario, filaments_in_field=in_field),
                 condition,
-                day=(_FIRST_DAY + timedelta(days=number)).isoformat(),
+                day=(date.fromisoformat(scenario.first_day) + timedelta(days=number)).isoformat(),
                 chamber=f"c{turn * len(today) + k + 1}",
                 day_truth=own[k],
                 rng=chambers[k][turn],
@@ -157,6 +159,7 @@ def _simulate_chamber(
                 name=f"{day}_{chamber}_f{number + 1}",
                 condition=condition.name,
                 control=condition.control,
+                columns=condition.columns,
                 day=day,
                 chamber=chamber,
                 field=f"f{number + 1}",

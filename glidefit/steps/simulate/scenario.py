@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, fields
+from datetime import date
 
 import numpy as np
 
@@ -40,6 +41,7 @@ class ScenarioCondition:
     start_rate_per_s: float = 0.0
     motile_fraction: float | None = None  # gliding / seen at a moment; None: what others leave
     control: bool = False
+    columns: tuple[tuple[str, str], ...] = ()  # more columns of the sheet: name, text
 
     def __post_init__(self) -> None:
         if not self.speed_um_s > 0:
@@ -87,7 +89,9 @@ class Scenario:
     exposed_steps: int = 1  # positions kept of each exposure, for drawing smeared spots
     pixel_um: float = 0.16
     localization_error_um: float = 0.03
+    first_day: str = "2026-03-02"
     days: int = 3
+    day_speed_factors: tuple[float, ...] = ()  # what goes wrong on a day: a factor for each
     chambers_per_day: int | tuple[int, ...] = 2  # of each condition; or a number for each day
     recordings_per_chamber: int = 1  # each of its own field of view
     # Of all kinds, expected in a recording at a moment; or a number for each chamber of each day.
@@ -130,7 +134,11 @@ class Scenario:
             raise ValueError("pixel_um and drift_wander_time_s must be > 0")
         if min(self.localization_error_um, self.detached_diffusion_um2_s) < 0:
             raise ValueError("localization_error_um and detached_diffusion_um2_s must be >= 0")
-        _ = self.timing  # its own checks
+        if len(self.day_speed_factors) not in (0, self.days):
+            raise ValueError("day_speed_factors must have a number for each of the days")
+        if self.day_speed_factors and not min(self.day_speed_factors) > 0:
+            raise ValueError("day_speed_factors must be > 0")
+        _ = self.timing, date.fromisoformat(self.first_day)  # their own checks
 
     @property
     def chambers_of_day(self) -> tuple[int, ...]:
