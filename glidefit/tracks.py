@@ -37,6 +37,8 @@ class Tracks:
         Direction of the body, where the source knows it.
     length_um : (n,) array or None
         Contour length, where the source knows it.
+    flag : (n,) array of str or None
+        Why a position is not to be trusted, "" for one that is; where the source knows it.
     """
 
     label: NDArray[np.str_]
@@ -47,6 +49,7 @@ class Tracks:
     y_um: Floats
     heading_rad: Floats | None = None
     length_um: Floats | None = None
+    flag: NDArray[np.str_] | None = None
 
     def __post_init__(self) -> None:
         n = len(self.frame)
@@ -102,6 +105,7 @@ class Tracks:
             y_um=self.y_um[keep],
             heading_rad=None if self.heading_rad is None else self.heading_rad[keep],
             length_um=None if self.length_um is None else self.length_um[keep],
+            flag=None if self.flag is None else self.flag[keep],
         )
 
     def moved(self, x_um: Floats, y_um: Floats) -> Tracks:
@@ -115,6 +119,7 @@ class Tracks:
             y_um=y_um,
             heading_rad=self.heading_rad,
             length_um=self.length_um,
+            flag=self.flag,
         )
 
     def to_frame(self) -> pd.DataFrame:
@@ -132,6 +137,8 @@ class Tracks:
             columns["heading_rad"] = self.heading_rad
         if self.length_um is not None:
             columns["length_um"] = self.length_um
+        if self.flag is not None:
+            columns["flag"] = self.flag
         return pd.DataFrame(columns)
 
     @classmethod
@@ -163,6 +170,9 @@ class Tracks:
             y_um=column("y_um"),
             heading_rad=column("heading_rad") if "heading_rad" in table else None,
             length_um=column("length_um") if "length_um" in table else None,
+            flag=table["flag"].astype(str).to_numpy()[order].astype(np.str_)
+            if "flag" in table
+            else None,
         )
 
 
