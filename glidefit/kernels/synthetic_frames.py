@@ -230,7 +230,7 @@ def spot_frames(
         raise ValueError("a track with two positions in a frame")
     light = illumination(shape_px, unevenness=faults.unevenness)
     hot = faults.hot_pixel_photons * (rng.random(shape_px) < faults.hot_pixel_share)
-    bright = _blinking(int(track.max(initial=-1)) + 1, frame_s=frame_s, faults=faults, rng=rng)
+    bright = blinking(int(track.max(initial=-1)) + 1, frame_s=frame_s, faults=faults, rng=rng)
     for number in range(n_frames):
         first, last = np.searchsorted(sorted_frame, [number, number + 1])
         rows = order[first:last]
@@ -262,7 +262,7 @@ def _inside(along_um: Floats, n_pixels: int, pixel_um: float) -> NDArray[np.bool
     return inside
 
 
-def _blinking(
+def blinking(
     n: int, *, frame_s: float, faults: CameraFaults, rng: np.random.Generator
 ) -> Iterator[NDArray[np.bool_]]:
     """Which of n spots shine, frame by frame: on or off for a whole frame, stationary."""
