@@ -108,6 +108,32 @@ class Tracks:
             flag=None if self.flag is None else self.flag[keep],
         )
 
+    def positions(self, chosen: NDArray[np.bool_]) -> Tracks:
+        """The positions for which ``chosen`` (n,) is true; tracks without one are left out."""
+        counts = np.bincount(self.index[chosen], minlength=self.n_tracks)
+
+        def cut(column: Any) -> Any:
+            return None if column is None else column[chosen]
+
+        return Tracks(
+            label=self.label[counts > 0],
+            offsets=np.concatenate([[0], np.cumsum(counts[counts > 0])]).astype(np.int64),
+            frame=self.frame[chosen],
+            time_s=self.time_s[chosen],
+            x_um=self.x_um[chosen],
+            y_um=self.y_um[chosen],
+            heading_rad=cut(self.heading_rad),
+            length_um=cut(self.length_um),
+            flag=cut(self.flag),
+        )
+
+    def joined(self, other: Tracks) -> Tracks:
+        """These positions and others of the same tracks, which must not share a frame."""
+        import pandas as pd
+
+        table = pd.concat([self.to_frame(), other.to_frame()], ignore_index=True)
+        return Tracks.from_frame(table)
+
     def moved(self, x_um: Floats, y_um: Floats) -> Tracks:
         """The same tracks at other positions (n,), as after subtracting drift."""
         return Tracks(

@@ -60,7 +60,7 @@ def respaced(x, y):  # type: ignore[no-untyped-def]
 def at(values, place):  # type: ignore[no-untyped-def]
     """Value at a place on a curve; straight on beyond its ends."""
     n = len(values)
-    i = min(max(int(math.floor(place)), 0), n - 2)
+    i = min(max(math.floor(place), 0), n - 2)
     return values[i] + (place - i) * (values[i + 1] - values[i])
 
 
@@ -91,7 +91,7 @@ def _normals(x, y):  # type: ignore[no-untyped-def]
 def _read(image, others, joint, x, y, nx, ny, width, noise, amplitude, shift, weight, gradient):  # type: ignore[no-untyped-def]
     """Across every point of a curve: amplitude, amplitude × offset, and their weights."""
     h, w = image.shape
-    half = int(math.ceil(2.5 * width))
+    half = math.ceil(2.5 * width)
     g, dg = np.empty(2 * half + 1), np.empty(2 * half + 1)
     gg, dd = 0.0, 0.0
     for k in range(-half, half + 1):
@@ -260,8 +260,8 @@ def lit_interval(amplitude, weight, tail_low, tail_high, head_low, head_high, us
 @njit(cache=True)
 def _lit_end(amplitude, weight, start, stop, usual, way):  # type: ignore[no-untyped-def]
     n = len(amplitude)
-    i = int(math.floor(start)) if way < 0 else int(math.ceil(start))
-    last = max(int(math.ceil(stop)), 0) if way < 0 else min(int(math.floor(stop)), n - 1)
+    i = math.floor(start) if way < 0 else math.ceil(start)
+    last = max(math.ceil(stop), 0) if way < 0 else min(math.floor(stop), n - 1)
     total, best, end = 0.0, 0.0, i - 0.5 * way
     while (i - last) * way <= 0:
         if 0 <= i < n and weight[i] > 0:
@@ -350,13 +350,41 @@ def fit_ends(amplitude, weight, tail, head, tail_blur, head_blur, usual):  # typ
 
 
 @njit(cache=True)
+def spot_middle(image, others, x, y, width):  # type: ignore[no-untyped-def]
+    """The place near a point where a Gaussian of this width matches the light best.
+
+    Newton steps to where the light, weighted by the Gaussian, is balanced.
+    """
+    h, w = image.shape
+    r = math.ceil(2.5 * width)
+    start_x, start_y = x, y
+    for _ in range(8):
+        total, sx, sy = 0.0, 0.0, 0.0
+        for v in range(max(int(y) - r, 0), min(int(y) + r + 2, h)):
+            for u in range(max(int(x) - r, 0), min(int(x) + r + 2, w)):
+                weight = math.exp(-((u - x) ** 2 + (v - y) ** 2) / (2 * width**2))
+                light = weight * (image[v, u] - others[v, u])
+                total += light
+                sx += light * (u - x)
+                sy += light * (v - y)
+        if total <= 0:
+            return start_x, start_y
+        # Where the light is a Gaussian of the same width, its balance is half of the way.
+        x += 2 * min(max(sx / total, -0.5), 0.5)
+        y += 2 * min(max(sy / total, -0.5), 0.5)
+        if abs(x - start_x) > 3 * width or abs(y - start_y) > 3 * width:
+            return start_x, start_y
+    return x, y
+
+
+@njit(cache=True)
 def light_between(amplitude, weight, tail, head):  # type: ignore[no-untyped-def]
     """Mean amplitude between two places, its significance, and the share that could be seen."""
     total, norm, count, seen = 0.0, 0.0, 0, 0
     heaviest = 0.0
     for i in range(len(weight)):
         heaviest = max(heaviest, weight[i])
-    for i in range(max(int(math.ceil(tail)), 0), min(int(head), len(amplitude) - 1) + 1):
+    for i in range(max(math.ceil(tail), 0), min(int(head), len(amplitude) - 1) + 1):
         if weight[i] <= 0:  # outside the frame
             continue
         total += weight[i] * amplitude[i]
@@ -375,7 +403,7 @@ def dark_stretch(amplitude, weight, tail, head, usual):  # type: ignore[no-untyp
     Only what is clearly dark counts: the mean over the stretch is below 0.3 ``usual`` and away
     from it by three times its error. Points that others hide end a stretch.
     """
-    first = max(int(math.ceil(tail)) + 2, 0)
+    first = max(math.ceil(tail) + 2, 0)
     last = min(int(head) - 2, len(amplitude) - 1)
     heaviest = 0.0
     for i in range(len(weight)):
@@ -400,16 +428,16 @@ def dark_stretch(amplitude, weight, tail, head, usual):  # type: ignore[no-untyp
 def draw(image, x, y, tail, head, amplitude, width, sign):  # type: ignore[no-untyped-def]
     """Add a filament's light to an image: Gaussians along its contour, ``sign`` times."""
     h, w = image.shape
-    r = int(math.ceil(3 * width))
+    r = math.ceil(3 * width)
     norm = sign * amplitude / (math.sqrt(2 * math.pi) * width)
-    first, last = int(math.floor(tail)), int(math.ceil(head))
+    first, last = math.floor(tail), math.ceil(head)
     gx = np.empty(2 * r + 1)
     for i in range(first, last + 1):
         share = min(head, i + 0.5) - max(tail, i - 0.5)
         if share <= 0:
             continue
         px, py = at(x, float(i)), at(y, float(i))
-        j, k = int(math.floor(px + 0.5)), int(math.floor(py + 0.5))
+        j, k = math.floor(px + 0.5), math.floor(py + 0.5)
         if j < -r or k < -r or j >= w + r or k >= h + r:
             continue
         for u in range(-r, r + 1):
@@ -458,7 +486,7 @@ def extended(x, y, tail, head, before, after):  # type: ignore[no-untyped-def]
         A place on the old curve minus ``shift`` is that on the new one.
     """
     n = len(x)
-    first, last = int(math.floor(tail - before)), int(math.ceil(head + after))
+    first, last = math.floor(tail - before), math.ceil(head + after)
     m = last - first + 1
     new_x, new_y = np.empty(m), np.empty(m)
     reach = min(8.0, n - 1.0)

@@ -104,8 +104,10 @@ def block_statistics(
     if before is not None and before.level.shape == (rows, columns):
         start = before
     level, noise = _clipped_blocks(frame, start.level, start.noise)
-    least = math.sqrt(_ROUNDING_VARIANCE) if rounding else 1e-6 * float(np.abs(level).max())
-    return BlockStatistics(_median_of_nine(level), np.maximum(_median_of_nine(noise), least))
+    least = max(1e-6 * float(np.abs(level).max()), float(np.finfo(np.float32).tiny))
+    if rounding:
+        least = max(least, math.sqrt(_ROUNDING_VARIANCE))
+    return BlockStatistics(_weighted_of_nine(level), np.maximum(_median_of_nine(noise), least))
 
 
 @njit(cache=True)
@@ -151,8 +153,9 @@ def _clipped(frame, y0, y1, x0, x1, middle, spread):  # type: ignore[no-untyped-
     if n == 0:
         return 0, middle, spread
     mean = s1 / n
-    variance = max(s2 / n - mean * mean, 0.0)
-    return n, middle + mean, math.sqrt(variance / _CLIPPED_VARIANCE)
+    variance = s2 / n - mean * mean
+    spread = math.sqrt(variance / _CLIPPED_VARIANCE) if variance > 0 else 0.0
+    return n, middle + mean, spread
 
 
 @njit(cache=True)
@@ -163,6 +166,17 @@ def _middle_and_spread(pixels):  # type: ignore[no-untyped-def]
     # The lower half has no filament in it.
     spread = (middle - float(values[int(0.1587 * n)])) if n > 3 else 0.0
     return middle, max(spread, 0.0)
+
+
+def _weighted_of_nine(blocks: Floats) -> Floats:
+    """Mean with weights 1, 2, 1 along both axes, straight on at the border."""
+    for _ in range(2):
+        if len(blocks) > 1:
+            first, last = 2 * blocks[:1] - blocks[1:2], 2 * blocks[-1:] - blocks[-2:-1]
+            wide = np.concatenate([first, blocks, last])
+            blocks = 0.25 * (wide[:-2] + 2 * wide[1:-1] + wide[2:])
+        blocks = blocks.T
+    return np.ascontiguousarray(blocks)
 
 
 @njit(cache=True)
@@ -182,7 +196,6 @@ def ridge_frame(
     scale: LineScale,
     blocks: BlockStatistics,
     block_px: int,
-    sign: float = 1.0,
 ) -> RidgeFrame:
     """Contrast, smoothed contrast and strength of ridges of a frame.
 
@@ -199,10 +212,8 @@ def ridge_frame(
         Of this frame.
     block_px : int
         With which they were made.
-    sign : float
-        1 for bright lines, -1 for dark ones on a bright background.
     """
-    contrast = _contrast(frame.astype(np.float32, copy=False), blocks.level, np.float32(sign))
+    contrast = _contrast(frame.astype(np.float32, copy=False), blocks.level)
     profile = scale.width_px**2 + 0.1
     hot = _take_out_spikes(contrast, blocks.noise, _SPIKE_SHARE * math.exp(-0.5 / profile))
     smooth = _smoothed(contrast, _gaussian(scale.smooth_px))
@@ -226,13 +237,13 @@ def _between(n, blocks):  # type: ignore[no-untyped-def]
         return first, way
     for x in range(n):
         place = (x + 0.5) * blocks / n - 0.5
-        first[x] = min(max(int(math.floor(place)), 0), blocks - 2)
+        first[x] = min(max(math.floor(place), 0), blocks - 2)
         way[x] = min(max(place - first[x], -0.5), 1.5)
     return first, way
 
 
 @njit(cache=True, fastmath=True)
-def _contrast(frame, level, sign):  # type: ignore[no-untyped-def]
+def _contrast(frame, level):  # type: ignore[no-untyped-def]
     h, w = frame.shape
     rows, columns = level.shape
     fy, wy = _between(h, rows)
@@ -248,7 +259,7 @@ def _contrast(frame, level, sign):  # type: ignore[no-untyped-def]
         upper, lower, way = wide[fy[y]], wide[min(fy[y] + 1, rows - 1)], wy[y]
         source, target = frame[y], out[y]
         for x in range(w):
-            target[x] = sign * (source[x] - upper[x] - way * (lower[x] - upper[x]))
+            target[x] = source[x] - upper[x] - way * (lower[x] - upper[x])
     return out
 
 
@@ -550,7 +561,7 @@ def trace(smooth, owner, x, y, angle, d, unit, low, steps, blind):  # type: igno
 def own(owner, x, y, radius, mark):  # type: ignore[no-untyped-def]
     """Mark the pixels within a radius of a curve."""
     h, w = owner.shape
-    r = int(math.ceil(radius))
+    r = math.ceil(radius)
     for k in range(len(x)):
         j, i = int(x[k] + 0.5), int(y[k] + 0.5)
         for v in range(max(0, i - r), min(h, i + r + 1)):

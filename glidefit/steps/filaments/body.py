@@ -36,6 +36,7 @@ class Seen:
     head_cut: bool
     flag: str = ""
     gap: float = 0.0  # longest dark stretch of the contour
+    shown: float | None = None  # place that stands for the midpoint if that is outside the field
 
     @property
     def length(self) -> float:
@@ -72,6 +73,8 @@ class Seen:
             tail_cut=self.head_cut,
             head_cut=self.tail_cut,
             flag=self.flag,
+            gap=self.gap,
+            shown=None if self.shown is None else last - self.shown,
         )
 
 
@@ -171,7 +174,8 @@ def born(number: int, frame: int, seen: Seen) -> Body:
 
 
 def _row(frame: int, seen: Seen, speed: float | None) -> Row:
-    x, y = seen.point(seen.middle)
+    middle = seen.middle if seen.shown is None else seen.shown
+    x, y = seen.point(middle)
     half = min(max(4.0, 0.1 * seen.length), 8.0)
     places = np.linspace(seen.tail, seen.head, max(2, math.ceil(seen.length / 4) + 1))
     index = np.arange(len(seen.x))
@@ -180,7 +184,7 @@ def _row(frame: int, seen: Seen, speed: float | None) -> Row:
         frame=frame,
         x_px=x,
         y_px=y,
-        heading=float(contours.direction(seen.x, seen.y, seen.middle, half)),
+        heading=float(contours.direction(seen.x, seen.y, middle, half)),
         length_px=seen.length,
         flag=seen.flag,
         speed_px=float("nan") if speed is None else speed,

@@ -21,7 +21,7 @@ _SEED, _FADED = 0.9, 2.0
 _WHOLE = 1.6
 _LONGEST_TRACE = 4000
 # How much stronger a seed's direction must be than any other, to be traced before the rest.
-_ALONE = 0.6
+_ALONE = 0.45
 # Steps in a row without a ridge.
 _BLIND = 7
 # Half the width of what a filament owns, in widths of its profile.

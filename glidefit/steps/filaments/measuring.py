@@ -26,6 +26,8 @@ _SLACK, _SLACK_STEPS = 3.0, 0.4
 _GROWTH = 14.0
 # An end is trusted to this standard deviation.
 _TRUSTED_SD = 1.5
+# What is shorter than so many widths is located like a spot.
+_SPOT = 5.0
 # A body that leaves the field is followed until so few pixels are left.
 _SHORTEST = 1
 # Share of a body's usual light below which it is gone.
@@ -106,8 +108,11 @@ def _finished(
     tail, head, tail_sd, head_sd = contours.fit_ends(
         amplitude, weight, tail, head, blur, blur, usual
     )
+    if head - tail < _SPOT * scene.scale.width_px:
+        x, y = _centred(scene, x, y, tail, head)
     light, significance, share = contours.light_between(amplitude, weight, tail, head)
     ends = [(contours.at(x, p), contours.at(y, p)) for p in (tail, head)]
+    tail_cut, head_cut = (scene.outside(*end) for end in ends)
     return Seen(
         x=x,
         y=y,
@@ -118,10 +123,31 @@ def _finished(
         light=light,
         significance=significance,
         share=share,
-        tail_cut=scene.outside(*ends[0]),
-        head_cut=scene.outside(*ends[1]),
+        tail_cut=tail_cut,
+        head_cut=head_cut,
+        flag=CUT if tail_cut or head_cut else "",
         gap=contours.dark_stretch(amplitude, weight, tail, head, usual)[0],
     )
+
+
+def _centred(scene: Scene, x: Floats, y: Floats, tail: float, head: float) -> tuple[Floats, Floats]:
+    """The curve moved so that its midpoint is that of the light, as for a spot."""
+    middle = 0.5 * (tail + head)
+    px, py = float(contours.at(x, middle)), float(contours.at(y, middle))
+    width = math.hypot(scene.scale.width_px, max(head - tail, 0.0) / math.sqrt(12))
+    new_x, new_y = contours.spot_middle(scene.frame.contrast, scene.others, px, py, width)
+    return x + (new_x - px), y + (new_y - py)
+
+
+def _shown(scene: Scene, seen: Seen) -> float | None:
+    """Middle of what is inside the frame, if the midpoint is not."""
+    h, w = scene.frame.contrast.shape
+    places = np.linspace(seen.tail, seen.head, max(2, math.ceil(seen.length) + 1))
+    x, y = np.array([seen.point(p) for p in (*places, seen.middle)]).T
+    inside = (x >= 0) & (x <= w - 1) & (y >= 0) & (y <= h - 1)
+    if inside[-1] or not inside[:-1].any():
+        return None
+    return float(np.median(places[inside[:-1]]))
 
 
 def expected(body: Body, frame: int) -> tuple[Seen, float]:
@@ -238,6 +264,7 @@ def _settled(
             seen.head = seen.tail + body.length
         elif body.length_known and head_ok and not seen.head_cut:
             seen.tail = seen.head - body.length
+        seen.shown = _shown(scene, seen)
     offs = [o for o, ok in ((tail_off, tail_ok), (head_off, head_ok)) if ok]
     if tail_ok and head_ok and not seen.flag:
         body.learn_length(seen.length)
