@@ -22,8 +22,9 @@ _BLUR = 0.17
 _ROUNDS = 3
 # A fit moves no point farther than this in one round.
 _STEP = 1.0
-# Light of labels varies along a filament by this share.
-_SPECKLE = 0.3
+# The light of labels varies along a filament by this share from place to place, and by these over
+# the length of a window, usually and where little of the filament lies in it.
+_SPECKLE, _ALIKE, _SPECKLE_OF_SHORT = 0.2, 0.1, 0.3
 # A filament is dark nowhere for so many pixels.
 _GAP = 6.0
 # How far inside and outside an end is looked to find it.
@@ -275,17 +276,36 @@ def _lit_end(amplitude, weight, start, stop, usual, way):  # type: ignore[no-unt
 
 
 @njit(cache=True)
-def _edge_cost(amplitude, weight, first, last, tail, head, blur, usual):  # type: ignore[no-untyped-def]
-    wmm, wma, waa = 0.0, 0.0, 0.0
+def _edge_cost(amplitude, weight, first, last, tail, head, blur, usual, shared, alike):  # type: ignore[no-untyped-def]
+    """Minus twice the log-likelihood of the light near an end, up to a constant.
+
+    ``shared[k]`` is the relative covariance of the labels' light at k pixels' distance, so that
+    the dark pixels beyond the end, which no label disturbs, count for more than those within.
+    """
+    n = last - first + 1
     scale = 1 / (math.sqrt(2.0) * blur)
-    for i in range(first, last + 1):
-        m = 0.5 * (math.erf((head - i) * scale) - math.erf((tail - i) * scale))
-        wmm += weight[i] * m * m
-        wma += weight[i] * m * amplitude[i]
-        waa += weight[i] * amplitude[i] ** 2
-    prior = 1 / (_SPECKLE * usual) ** 2
-    a = (wma + usual * prior) / (wmm + prior)
-    return waa - 2 * a * wma + a * a * wmm + prior * (a - usual) ** 2
+    m, z = np.empty(n), np.empty(n)
+    for i in range(n):
+        place = first + i
+        m[i] = usual * 0.5 * (math.erf((head - place) * scale) - math.erf((tail - place) * scale))
+    factor = np.empty((n, n))
+    cost = 0.0
+    for i in range(n):
+        rest = amplitude[first + i] - m[i]
+        for j in range(i + 1):
+            value = m[i] * m[j] * (shared[i - j] + alike)
+            if i == j:
+                value += 1 / max(weight[first + i], 1e-12)
+            for k in range(j):
+                value -= factor[i, k] * factor[j, k]
+            if i == j:
+                factor[i, i] = math.sqrt(max(value, 1e-300))
+            else:
+                factor[i, j] = value / factor[j, j]
+                rest -= factor[i, j] * z[j]
+        z[i] = rest / factor[i, i]
+        cost += z[i] * z[i] + 2 * math.log(factor[i, i])
+    return cost
 
 
 @njit(cache=True)
@@ -298,44 +318,52 @@ def _one_end(amplitude, weight, tail, head, blur, usual, is_head):  # type: igno
     else:
         first, last = int(start - _OUTSIDE), int(min(start + _INSIDE, head + 3)) + 1
     first, last = max(first, 0), min(last, n - 1)
-    step, reach = 0.25, 12
+    if last - first < 3:
+        return start, 3.0
+    shared = np.empty(last - first + 1)
+    for k in range(len(shared)):
+        shared[k] = _SPECKLE**2 * math.exp(-(k**2) / (4 * blur**2))
+    alike = _ALIKE**2 if head - tail > _INSIDE else _SPECKLE_OF_SHORT**2
+    reach = 6
+    step = 0.5
     cost = np.empty(2 * reach + 1)
     best = 0
     for k in range(2 * reach + 1):
         place = start + (k - reach) * step
-        if is_head:
-            place = max(place, tail + 0.05)
-            cost[k] = _edge_cost(amplitude, weight, first, last, tail, place, blur, usual)
-        else:
-            place = min(place, head - 0.05)
-            cost[k] = _edge_cost(amplitude, weight, first, last, place, head, blur, usual)
+        t, h = (tail, max(place, tail + 0.05)) if is_head else (min(place, head - 0.05), head)
+        cost[k] = _edge_cost(amplitude, weight, first, last, t, h, blur, usual, shared, alike)
         if cost[k] < cost[best]:
             best = k
+    middle = start + (best - reach) * step
     if best == 0 or best == 2 * reach:
-        return start + (best - reach) * step, 3.0
-    curve = cost[best - 1] - 2 * cost[best] + cost[best + 1]
-    shift = 0.0
-    if curve > 1e-12:
-        shift = 0.5 * (cost[best - 1] - cost[best + 1]) / curve
-    place = start + (best - reach + shift) * step
+        return middle, 3.0
+    lowest, curve, shift = cost[best], 0.0, 0.0
+    sides = np.empty(2)
+    for k in range(2):
+        place = middle + (k - 0.5) * step
+        t, h = (tail, max(place, tail + 0.05)) if is_head else (min(place, head - 0.05), head)
+        sides[k] = _edge_cost(amplitude, weight, first, last, t, h, blur, usual, shared, alike)
+    curve = sides[0] - 2 * lowest + sides[1]
+    if curve > 1e-9:
+        shift = min(max(0.5 * (sides[0] - sides[1]) / curve, -1.0), 1.0)
     # How far the cost must be left to rise by 1 is more honest than its curvature at the bottom.
     low, high = best, best
-    while low > 0 and cost[low] < cost[best] + 1:
+    while low > 0 and cost[low] < lowest + 1:
         low -= 1
-    while high < 2 * reach and cost[high] < cost[best] + 1:
+    while high < 2 * reach and cost[high] < lowest + 1:
         high += 1
-    deviation = 0.5 * (high - low) * step
-    if curve > 1e-12:
-        deviation = max(math.sqrt(2.0 / curve) * step, 0.5 * deviation)
-    return place, min(deviation, 3.0)
+    deviation = 0.25 * (high - low) * step
+    if curve > 1e-9:
+        deviation = max(math.sqrt(2.0 / curve) * 0.5 * step, deviation if high - low > 2 else 0.0)
+    return middle + shift * 0.5 * step, min(deviation, 3.0)
 
 
 @njit(cache=True)
 def fit_ends(amplitude, weight, tail, head, tail_blur, head_blur, usual):  # type: ignore[no-untyped-def]
     """Both ends of a filament on its curve to a fraction of the spread.
 
-    The light along it is a step blurred at both ends, whose height near an end is free within what
-    labels scatter; each end in turn is moved to where the squared residuals are least.
+    The light along it is a step blurred at both ends, with the noise of the pixels and, where it is
+    lit, the scatter of the labels; each end in turn is moved to where that is likeliest.
 
     Returns
     -------
@@ -343,7 +371,7 @@ def fit_ends(amplitude, weight, tail, head, tail_blur, head_blur, usual):  # typ
         Places and standard deviations in pixels.
     """
     tail_sd, head_sd = 3.0, 3.0
-    for _ in range(2):
+    for _ in range(2 if head - tail < 2 * _INSIDE else 1):
         head, head_sd = _one_end(amplitude, weight, tail, head, head_blur, usual, True)
         tail, tail_sd = _one_end(amplitude, weight, tail, head, tail_blur, usual, False)
     return tail, head, tail_sd, head_sd

@@ -194,17 +194,27 @@ def _join(state: Following, frame: int) -> None:
     """Two bodies that go on one behind the other, end to end, are one filament."""
     here = [b for b in state.bodies if b.frame == frame and len(b.rows) >= 2 and b.moving_known]
     touching: dict[tuple[int, int], int] = {}
-    for i, a in enumerate(here):
-        for b in here[i + 1 :]:
-            turned = _end_to_end(a, b)
-            if turned is None:
-                continue
-            count = state.touching.get((a.number, b.number), 0) + 1
-            touching[a.number, b.number] = count
-            if count >= _SAME_FRAMES and a in state.bodies and b in state.bodies:
-                a.join(b, *turned)
-                state.bodies.remove(b)
+    for a, b in _with_ends_together(here):
+        turned = _end_to_end(a, b)
+        if turned is None:
+            continue
+        count = state.touching.get((a.number, b.number), 0) + 1
+        touching[a.number, b.number] = count
+        if count >= _SAME_FRAMES and a in state.bodies and b in state.bodies:
+            a.join(b, *turned)
+            state.bodies.remove(b)
     state.touching = touching
+
+
+def _with_ends_together(bodies: list[Body]) -> list[tuple[Body, Body]]:
+    """Pairs of bodies of which two ends are near each other."""
+    if not bodies:
+        return []
+    ends = np.array([[b.seen.point(p) for p in (b.seen.tail, b.seen.head)] for b in bodies])
+    x, y = ends[..., 0].ravel(), ends[..., 1].ravel()
+    near = np.hypot(x[:, None] - x, y[:, None] - y) <= _END_TO_END + 2
+    pairs = near.reshape(len(bodies), 2, len(bodies), 2).any(axis=(1, 3))
+    return [(bodies[i], bodies[j]) for i, j in zip(*np.nonzero(np.triu(pairs, 1)), strict=True)]
 
 
 def _end_to_end(a: Body, b: Body) -> tuple[bool, bool] | None:
