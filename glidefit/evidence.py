@@ -16,7 +16,8 @@ Bools = NDArray[np.bool_]
 
 KEPT = ""
 STUCK, PIVOTING, DETACHED, JUMP, SHORT = "stuck", "pivoting", "detached", "jump", "short"
-REASONS = (STUCK, PIVOTING, DETACHED, JUMP, SHORT)
+UNCLEAR = "unclear"  # flagged in all but a few positions
+REASONS = (STUCK, PIVOTING, DETACHED, JUMP, SHORT, UNCLEAR)
 MIN_POSITIONS = 3  # fewer are no track, but they are counted
 
 
@@ -43,6 +44,8 @@ class CleanTracks:
     drift : Drift
     drift_x_um, drift_y_um : (n_frames,) arrays
         Subtracted displacement by frame; zeros if none was.
+    flagged : Tracks or None
+        Positions that are not to be trusted and stand in no other field.
     """
 
     tracks: Tracks
@@ -55,6 +58,7 @@ class CleanTracks:
     drift: Drift
     drift_x_um: Floats
     drift_y_um: Floats
+    flagged: Tracks | None = None
 
     @property
     def kept(self) -> Bools:

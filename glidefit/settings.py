@@ -41,20 +41,29 @@ class ColumnSettings(_Section):
     y_px: str = setting("y_px", "", "Column of y in pixels.")
     heading_rad: str = setting("heading_rad", "", "Column of the body's direction in rad.")
     length_um: str = setting("length_um", "", "Column of the contour length in µm.")
+    flag: str = setting(
+        "flag", "", "Column that says why a position is not to be trusted; empty for one that is."
+    )
 
 
 class DetectSettings(_Section):
-    """How spots are found in a frame."""
+    """How spots and filaments are found in a frame."""
 
     threshold: float = setting(
         5.0,
         "× noise",
-        "How far a spot must stand out of the noise of the filtered frame; raised a little in "
-        "large frames and in the dark, so that empty frames stay empty.",
+        "How far a spot or filament must stand out of the noise of the filtered frame; raised a "
+        "little for spots in large frames and in the dark, so that empty frames stay empty.",
         gt=0,
     )
     spot_diameter: float = setting(
-        0.9, "µm", "Width of the picture of one spot, out to where it fades.", gt=0
+        0.9,
+        "µm",
+        "Width of the picture of one spot, or across a filament, out to where it fades.",
+        gt=0,
+    )
+    contrast: Literal["bright", "dark"] = setting(
+        "bright", "", "Whether the tracers are brighter or darker than the background."
     )
 
 

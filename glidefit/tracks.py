@@ -37,6 +37,8 @@ class Tracks:
         Direction of the body, where the source knows it.
     length_um : (n,) array or None
         Contour length, where the source knows it.
+    flag : (n,) array of str or None
+        Why a position is not to be trusted, "" for one that is; where the source knows it.
     """
 
     label: NDArray[np.str_]
@@ -47,6 +49,7 @@ class Tracks:
     y_um: Floats
     heading_rad: Floats | None = None
     length_um: Floats | None = None
+    flag: NDArray[np.str_] | None = None
 
     def __post_init__(self) -> None:
         n = len(self.frame)
@@ -102,7 +105,34 @@ class Tracks:
             y_um=self.y_um[keep],
             heading_rad=None if self.heading_rad is None else self.heading_rad[keep],
             length_um=None if self.length_um is None else self.length_um[keep],
+            flag=None if self.flag is None else self.flag[keep],
         )
+
+    def positions(self, chosen: NDArray[np.bool_]) -> Tracks:
+        """The positions for which ``chosen`` (n,) is true; tracks without one are left out."""
+        counts = np.bincount(self.index[chosen], minlength=self.n_tracks)
+
+        def cut(column: Any) -> Any:
+            return None if column is None else column[chosen]
+
+        return Tracks(
+            label=self.label[counts > 0],
+            offsets=np.concatenate([[0], np.cumsum(counts[counts > 0])]).astype(np.int64),
+            frame=self.frame[chosen],
+            time_s=self.time_s[chosen],
+            x_um=self.x_um[chosen],
+            y_um=self.y_um[chosen],
+            heading_rad=cut(self.heading_rad),
+            length_um=cut(self.length_um),
+            flag=cut(self.flag),
+        )
+
+    def joined(self, other: Tracks) -> Tracks:
+        """These positions and others of the same tracks, which must not share a frame."""
+        import pandas as pd
+
+        table = pd.concat([self.to_frame(), other.to_frame()], ignore_index=True)
+        return Tracks.from_frame(table)
 
     def moved(self, x_um: Floats, y_um: Floats) -> Tracks:
         """The same tracks at other positions (n,), as after subtracting drift."""
@@ -115,6 +145,7 @@ class Tracks:
             y_um=y_um,
             heading_rad=self.heading_rad,
             length_um=self.length_um,
+            flag=self.flag,
         )
 
     def to_frame(self) -> pd.DataFrame:
@@ -132,6 +163,8 @@ class Tracks:
             columns["heading_rad"] = self.heading_rad
         if self.length_um is not None:
             columns["length_um"] = self.length_um
+        if self.flag is not None:
+            columns["flag"] = self.flag
         return pd.DataFrame(columns)
 
     @classmethod
@@ -163,6 +196,9 @@ class Tracks:
             y_um=column("y_um"),
             heading_rad=column("heading_rad") if "heading_rad" in table else None,
             length_um=column("length_um") if "length_um" in table else None,
+            flag=table["flag"].astype(str).to_numpy()[order].astype(np.str_)
+            if "flag" in table
+            else None,
         )
 
 

@@ -25,6 +25,26 @@ _ROUNDING_VARIANCE = 1 / 12
 _REFERENCE_LOOKS = 140.0
 
 
+def frame_fault(frame: NDArray[Any], shape: tuple[int, ...] | None) -> tuple[str, str] | None:
+    """What is wrong with a frame and what was expected; None if it can be used.
+
+    Parameters
+    ----------
+    frame : array
+        One frame as it was read.
+    shape : tuple of int or None
+        Of the frames before.
+    """
+    if frame.ndim != 2 or frame.dtype.kind not in "uif" or min(frame.shape) < 3:
+        found = f"an array of {frame.dtype} with shape {frame.shape}"
+        return found, "one channel of grey values, height × width"
+    if shape is not None and frame.shape != shape:
+        return f"shape {frame.shape}", f"{shape} as in the frames before"
+    if frame.dtype.kind == "f" and not np.all(np.isfinite(frame)):
+        return "pixels without a finite value", "a number in every pixel"
+    return None
+
+
 class FilteredFrame(NamedTuple):
     """One frame, made ready to look for spots."""
 

@@ -9,11 +9,12 @@ import numpy as np
 
 from glidefit.assay import Assay
 from glidefit.errors import InputError, input_errors
-from glidefit.pipeline.prepare import Task, detect, open_video, track
+from glidefit.pipeline.prepare import OpenVideo, Task, detect, filaments, open_video, track
 from glidefit.running.progress import progress
 from glidefit.running.workers import run_all
 from glidefit.settings import SourcedSettings
 from glidefit.steps.plausible import implausible
+from glidefit.tracks import Tracks
 
 # Frames of a video that are looked at.
 _LOOK = 25
@@ -131,21 +132,14 @@ def _look_at_table(task: Task) -> Look:
 
 def _look_at_video(task: Task) -> Look:
     from glidefit.kernels import motion
-    from glidefit.steps.link import link
 
     recording, settings = task.recording, task.settings
     video = open_video(recording)
-    spots = detect(recording, video, settings=settings, most_frames=_LOOK)
-    notes = list(video.facts.notes)
+    seen = (_look_at_spots if recording.shape == "spot" else _look_at_filaments)(task, video)
+    notes = [*video.facts.notes, *seen.notes]
     noise, speed = float("nan"), float("nan")
-    if len(spots.frame) == 0:
-        notes.append(f"no spot stands out of the noise in the first {spots.n_frames} frames")
-    else:
-        tracks, more = link(
-            spots, times_s=video.times(spots.n_frames), settings=settings.link, where=recording.name
-        )
-        notes += more
-        t = tracks
+    t = seen.tracks
+    if t.n_tracks:
         each = motion.localization_noise(t.frame, t.offsets, t.x_um, t.y_um)
         noise = motion.common_noise(each, t.n_positions)
     if np.isfinite(noise):
@@ -162,8 +156,8 @@ def _look_at_video(task: Task) -> Look:
         frame_source=video.frame_source,
         pixel_um=video.pixel_um,
         exposure_s=video.exposure_s,
-        brightness=f"{np.median(spots.background):.0f} ± {np.median(spots.noise):.3g} counts",
-        seen=f"{len(spots.frame) / spots.n_frames:.1f} spots a frame",
+        brightness=f"{seen.background:.0f} ± {seen.noise:.3g} counts",
+        seen=seen.count,
         localization_error_um=noise,
         quick_speed_um_s=speed,
         notes=(
@@ -175,4 +169,51 @@ def _look_at_video(task: Task) -> Look:
                 max_speed_um_s=settings.link.max_speed,
             ),
         ),
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Seen:
+    """What the first frames of a video show."""
+
+    tracks: Tracks
+    count: str
+    background: float
+    noise: float
+    notes: tuple[str, ...]
+
+
+def _look_at_spots(task: Task, video: OpenVideo) -> _Seen:
+    from glidefit.steps.link import link
+
+    spots = detect(task.recording, video, settings=task.settings, most_frames=_LOOK)
+    tracks, notes = link(
+        spots,
+        times_s=video.times(spots.n_frames),
+        settings=task.settings.link,
+        where=task.recording.name,
+    )
+    if len(spots.frame) == 0:
+        notes = (f"no spot stands out of the noise in the first {spots.n_frames} frames",)
+    return _Seen(
+        tracks=tracks,
+        count=f"{len(spots.frame) / spots.n_frames:.1f} spots a frame",
+        background=float(np.median(spots.background)),
+        noise=float(np.median(spots.noise)),
+        notes=notes,
+    )
+
+
+def _look_at_filaments(task: Task, video: OpenVideo) -> _Seen:
+    found = filaments(task.recording, video, settings=task.settings, most_frames=_LOOK)
+    notes = found.notes
+    if found.tracks.n_tracks == 0:
+        none = f"no filament stands out of the noise in the first {found.n_frames} frames"
+        notes = (none, *notes)
+    return _Seen(
+        tracks=found.tracks,
+        count=f"{len(found.tracks.frame) / found.n_frames:.1f} filaments a frame",
+        background=float(np.median(found.background)),
+        noise=float(np.median(found.noise)),
+        notes=notes,
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -19,6 +20,7 @@ from glidefit.tracks import Detections, Tracks
 
 if TYPE_CHECKING:
     from glidefit.reading.video import VideoFacts
+    from glidefit.steps.filaments import FilamentTracks
 
 Floats = NDArray[np.float64]
 
@@ -233,24 +235,16 @@ class OpenVideo:
 
 
 def open_video(recording: Recording) -> OpenVideo:
-    """Settle calibration and range of frames of a spot video, without reading its frames.
+    """Settle calibration and range of frames of a video, without reading its frames.
 
     Raises
     ------
     InputError
-        For a filament video, a contradiction between sheet and file, or a missing calibration.
+        For a contradiction between sheet and file, or a missing calibration.
     """
     from glidefit.reading.video import read_facts
 
     where = f"{recording.where}, {recording.name}"
-    if recording.shape == "filament":
-        raise InputError(
-            where,
-            "the sheet says shape `filament` for a video",
-            expected="`spot`: filaments cannot be followed in videos yet, only spots that ride on "
-            "them",
-            remedy="Give a track table of the filaments instead.",
-        )
     facts = read_facts(recording.path, channel=recording.channel, position=recording.position)
     pixel_um, pixel_source = _agreed(
         where, "pixel_um", "µm per pixel", recording.pixel_um, facts.pixel_um
@@ -285,27 +279,91 @@ def detect(
     recording: Recording, video: OpenVideo, *, settings: Settings, most_frames: int | None = None
 ) -> Detections:
     """Spots of a video, or of its first frames."""
-    from glidefit.reading.video import read_frames
     from glidefit.steps.detect import detect_spots
 
-    last = video.last if most_frames is None else min(video.last, video.first + most_frames - 1)
-    frames = read_frames(
-        recording.path,
-        first=video.first,
-        last=last,
-        channel=recording.channel,
-        position=recording.position,
-    )
     where = f"{recording.where}, {recording.name}"
+    frames = _frames(recording, video, settings=settings, most_frames=most_frames)
     return detect_spots(frames, pixel_um=video.pixel_um, settings=settings.detect, where=where)
 
 
+def filaments(
+    recording: Recording, video: OpenVideo, *, settings: Settings, most_frames: int | None = None
+) -> FilamentTracks:
+    """Filaments of a video, or of its first frames."""
+    from glidefit.steps.filaments import track_filaments
+
+    return track_filaments(
+        _frames(recording, video, settings=settings, most_frames=most_frames),
+        pixel_um=video.pixel_um,
+        times_s=video.times(_last(video, most_frames) - video.first + 1),
+        detect=settings.detect,
+        link=settings.link,
+        where=f"{recording.where}, {recording.name}",
+    )
+
+
+def _last(video: OpenVideo, most_frames: int | None) -> int:
+    return video.last if most_frames is None else min(video.last, video.first + most_frames - 1)
+
+
+def _frames(
+    recording: Recording, video: OpenVideo, *, settings: Settings, most_frames: int | None
+) -> Iterator[NDArray[np.generic]]:
+    """Frames with bright tracers."""
+    from glidefit.reading.video import read_frames
+
+    for frame in read_frames(
+        recording.path,
+        first=video.first,
+        last=_last(video, most_frames),
+        channel=recording.channel,
+        position=recording.position,
+    ):
+        dark = settings.detect.contrast == "dark" and frame.dtype.kind in "uif"
+        yield -frame.astype(np.int64 if frame.dtype.kind in "ui" else np.float64) if dark else frame
+
+
 def _from_video(task: Task) -> Tracked:
+    """Tracks of the tracers in a video."""
+    video = open_video(task.recording)
+    find = _spot_tracks if task.recording.shape == "spot" else _filament_tracks
+    tracks, n_frames, notes = find(task, video)
+    facts = video.facts
+    return Tracked(
+        tracks=tracks,
+        kind="video",
+        n_frames=n_frames,
+        frame_s=video.frame_s,
+        frame_s_source=video.frame_source,
+        pixel_um=video.pixel_um,
+        pixel_um_source=video.pixel_source,
+        exposure_s=video.exposure_s,
+        exposure_source=video.exposure_source,
+        field_um=(facts.width_px * video.pixel_um, facts.height_px * video.pixel_um),
+        notes=(*facts.notes, *notes),
+    )
+
+
+def _filament_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[str, ...]]:
+    recording, settings = task.recording, task.settings
+    found = filaments(recording, video, settings=settings)
+    if found.tracks.n_tracks == 0:
+        raise InputError(
+            f"{recording.where}, {recording.name}",
+            "no filament stands out of the noise in three frames"
+            + "".join(f"; {note}" for note in found.notes),
+            expected=f"filaments above {settings.detect.threshold:g} × noise",
+            remedy="Look at the video; lower detect.threshold, or correct detect.spot_diameter or "
+            "detect.contrast.",
+        )
+    return found.tracks, found.n_frames, found.notes
+
+
+def _spot_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[str, ...]]:
     from glidefit.steps.link import link
 
     recording, settings = task.recording, task.settings
     where = f"{recording.where}, {recording.name}"
-    video = open_video(recording)
     detections = detect(recording, video, settings=settings)
     if len(detections.frame) == 0:
         raise InputError(
@@ -316,20 +374,7 @@ def _from_video(task: Task) -> Tracked:
         )
     times = video.times(detections.n_frames)
     tracks, notes = link(detections, times_s=times, settings=settings.link, where=where)
-    facts = video.facts
-    return Tracked(
-        tracks=tracks,
-        kind="video",
-        n_frames=detections.n_frames,
-        frame_s=video.frame_s,
-        frame_s_source=video.frame_source,
-        pixel_um=video.pixel_um,
-        pixel_um_source=video.pixel_source,
-        exposure_s=video.exposure_s,
-        exposure_source=video.exposure_source,
-        field_um=(facts.width_px * video.pixel_um, facts.height_px * video.pixel_um),
-        notes=(*facts.notes, *notes),
-    )
+    return tracks, detections.n_frames, notes
 
 
 def _agreed(

@@ -21,6 +21,7 @@ from glidefit.running.checksums import sha256
 from glidefit.running.progress import progress
 from glidefit.running.workers import run_all
 from glidefit.settings import SourcedSettings
+from glidefit.tracks import Tracks
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -256,12 +257,20 @@ def _study(assay: Assay, prepared: list[Prepared], job: Job) -> StudyResult:
     )
 
 
+def _with_flagged(prepared: Prepared) -> tuple[str, Tracks, list[str], list[str]]:
+    """Recording, all its positions, a reason for each track, a flag for each position."""
+    clean = prepared.clean.clean
+    tracks, reason = clean.tracks, dict(zip(clean.tracks.label, clean.reason, strict=True))
+    if clean.flagged is not None:
+        tracks = tracks.joined(clean.flagged)
+    flags = [""] * len(tracks.frame) if tracks.flag is None else tracks.flag.tolist()
+    return prepared.clean.recording, tracks, [reason[name] for name in tracks.label], flags
+
+
 def _tables(result: StudyResult, prepared: list[Prepared]) -> dict[str, str]:
     from glidefit.writing import json_files, tables
 
-    tracks = tables.tracks_table(
-        (p.clean.recording, p.clean.clean.tracks, list(p.clean.clean.reason)) for p in prepared
-    )
+    tracks = tables.tracks_table(_with_flagged(p) for p in prepared)
     return {
         "results.json": json_files.results_text(result),
         "tables/tracks.csv": tracks,

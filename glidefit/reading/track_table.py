@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.errors import InputError, InputErrors
+from glidefit.reading.table_cells import visible
 from glidefit.reading.track_columns import Columns, labels, numbers, read_columns
 from glidefit.settings import ColumnSettings
 from glidefit.tracks import Tracks
@@ -99,6 +100,7 @@ def read_track_table(
         y_um=values[f"y_{unit}"][rows.order] * factor,
         heading_rad=_optional(values, "heading_rad", rows.order),
         length_um=_optional(values, "length_um", rows.order),
+        flag=_flags(table, rows.order),
     )
     return TrackTable(
         tracks=tracks,
@@ -308,6 +310,12 @@ def _no_interval(table: Columns, *, has_times: bool) -> InputError:
         expected="frame_s in the assay sheet, or a column time_s in the table",
         remedy="Fill in frame_s (in s) for this recording.",
     )
+
+
+def _flags(table: Columns, order: Ints) -> NDArray[np.str_] | None:
+    """Why positions are not trusted; a column without any text is none."""
+    texts = [visible(str(text)) for text in table.values.get("flag", ())]
+    return np.array(texts, dtype=np.str_)[order] if any(texts) else None
 
 
 def _optional(values: Mapping[str, Floats], name: str, order: Ints) -> Floats | None:

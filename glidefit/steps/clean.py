@@ -14,6 +14,7 @@ from glidefit.evidence import (
     PIVOTING,
     SHORT,
     STUCK,
+    UNCLEAR,
     CleanTracks,
 )
 from glidefit.kernels import drift as drifting
@@ -61,12 +62,12 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     InputError
         If no track has three successive frames, so that the noise cannot be measured.
     """
+    tracks, flagged, unclear = _without_flagged(tracks)
     noise = _noise(tracks, where)
     shift, drift = _drift(tracks, noise, frame_s, settings)
     if drift.subtracted:
-        tracks = tracks.moved(
-            tracks.x_um - shift[0][tracks.frame], tracks.y_um - shift[1][tracks.frame]
-        )
+        tracks = _shifted(tracks, shift)
+        flagged = None if flagged is None else _shifted(flagged, shift)
         noise = _noise(tracks, where)
     measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
     jump = _jumps(measured, noise, settings)
@@ -84,6 +85,7 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
         eligible=long_enough & ~jump,
     )
     reason = _reasons(tracks, measured, states, jump, noise=noise, settings=settings)
+    reason[unclear] = UNCLEAR
     gliding = (reason == KEPT) & (measured.lag > 0)
     duration = _duration(tracks, frame_s)
     noticed = smallest_noticed_speed(tracks.n_positions.astype(np.float64), duration, noise=noise)
@@ -92,7 +94,7 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     return CleanTracks(
         tracks=tracks,
         reason=reason.astype(np.str_),
-        decided=long_enough & (jump | (surest >= settings.odds / (1 + settings.odds))),
+        decided=long_enough & ~unclear & (jump | (surest >= settings.odds / (1 + settings.odds))),
         gliding_probability=states.gliding,
         noise_um=noise,
         typical_speed_um_s=_median(measured.speed_um_frame[gliding]) / frame_s,
@@ -100,7 +102,30 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
         drift=drift,
         drift_x_um=shift[0],
         drift_y_um=shift[1],
+        flagged=flagged,
     )
+
+
+def _without_flagged(tracks: Tracks) -> tuple[Tracks, Tracks | None, NDArray[np.bool_]]:
+    """Tracks without positions that are not to be trusted, these, and which tracks are unclear.
+
+    A track that would be left with fewer than three positions keeps all and is unclear.
+    """
+    if tracks.flag is None or not np.any(tracks.flag != ""):
+        return tracks, None, np.zeros(tracks.n_tracks, dtype=np.bool_)
+    good = tracks.flag == ""
+    left = np.bincount(tracks.index[good], minlength=tracks.n_tracks)
+    unclear = (left < MIN_POSITIONS) & (left < tracks.n_positions)
+    good = good | unclear[tracks.index]
+    if good.all():
+        return tracks, None, unclear
+    return tracks.positions(good), tracks.positions(~good), unclear
+
+
+def _shifted(tracks: Tracks, shift: tuple[Floats, Floats]) -> Tracks:
+    last = len(shift[0]) - 1
+    frame = np.minimum(tracks.frame, last)
+    return tracks.moved(tracks.x_um - shift[0][frame], tracks.y_um - shift[1][frame])
 
 
 def _noise(tracks: Tracks, where: str) -> float:

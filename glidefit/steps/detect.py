@@ -17,6 +17,7 @@ from glidefit.kernels.frames import (
     detection_height,
     filter_frame,
     fit_spots,
+    frame_fault,
 )
 from glidefit.settings import DetectSettings
 from glidefit.tracks import Detections
@@ -121,18 +122,12 @@ def _diameter(spot_diameter: float, pixel_um: float, where: str) -> int:
 
 
 def _check(frame: Frame, shape: tuple[int, ...] | None, where: str) -> None:
-    if frame.ndim != 2 or frame.dtype.kind not in "uif" or min(frame.shape) < 3:
-        found = f"an array of {frame.dtype} with shape {frame.shape}"
-        expected = "one channel of grey values, height × width"
-    elif shape is not None and frame.shape != shape:
-        found, expected = f"shape {frame.shape}", f"{shape} as in the frames before"
-    elif not np.all(np.isfinite(frame)):
-        found, expected = "pixels without a finite value", "a number in every pixel"
-    else:
-        return
-    raise InputError(
-        where, found, expected=expected, remedy="Save the video again, or choose the channel."
-    )
+    fault = frame_fault(frame, shape)
+    if fault is not None:
+        found, expected = fault
+        raise InputError(
+            where, found, expected=expected, remedy="Save the video again, or choose the channel."
+        )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

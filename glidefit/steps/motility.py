@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from glidefit.evidence import JUMP, KEPT, SHORT, STUCK, ChamberEvidence, CleanRecording
+from glidefit.evidence import JUMP, KEPT, SHORT, STUCK, UNCLEAR, ChamberEvidence, CleanRecording
 from glidefit.kernels import msd_fit
 from glidefit.kernels.pairs import pairs_at_lag
 from glidefit.results import TimePoint
@@ -43,7 +43,7 @@ def _chamber(day: str, chamber: str, recordings: list[CleanRecording]) -> Chambe
     owner, rows = [], []
     for one in recordings:
         clean = one.clean
-        judged = clean.decided & (clean.reason != JUMP) & (clean.reason != SHORT)
+        judged = clean.decided & ~np.isin(clean.reason, (JUMP, SHORT, UNCLEAR))
         frames = clean.tracks.n_positions.astype(np.float64)
         gliding = judged & (clean.reason == KEPT)
         moved = judged & (clean.reason != STUCK)
@@ -93,7 +93,7 @@ def _stretches(one: CleanRecording, longest_lag_s: float, pooled: Floats) -> lis
     kept = np.repeat(one.clean.kept, tracks.n_positions)
     reason = np.repeat(one.clean.reason, tracks.n_positions)
     judged = np.repeat(one.clean.decided, tracks.n_positions) & (reason != JUMP)
-    judged &= reason != SHORT
+    judged &= ~np.isin(reason, (SHORT, UNCLEAR))
     stretch = np.searchsorted(edges, tracks.frame, side="right") - 1
     seen = np.bincount(stretch[judged], minlength=n)
     gliding = np.bincount(stretch[judged & kept], minlength=n)

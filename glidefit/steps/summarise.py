@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from glidefit.evidence import (
     REASONS,
     SHORT,
+    UNCLEAR,
     BorrowedSpread,
     CleanRecording,
     Combined,
@@ -210,7 +211,7 @@ def _short(value: float) -> float:
 def drawn(recordings: Sequence[CleanRecording], *, most: int) -> tuple[DrawnTrack, ...]:
     """Tracks thinned for drawing, at most so many, evenly taken."""
     every = [(r, k) for r in recordings for k in range(r.clean.tracks.n_tracks)]
-    every = [(r, k) for r, k in every if r.clean.reason[k] != SHORT]
+    every = [(r, k) for r, k in every if r.clean.reason[k] not in (SHORT, UNCLEAR)]
     chosen = np.unique(np.linspace(0, len(every) - 1, min(most, len(every))).round().astype(int))
     return tuple(_drawn(*every[i]) for i in chosen)
 

@@ -19,8 +19,9 @@ def track_table_text(tracks: Tracks) -> str:
     """A track table as CSV, positions to 0.1 nm, times to 10 µs."""
     table = tracks.to_frame()
     table["time_s"] = table["time_s"].round(5)
-    for name in ("x_um", "y_um"):
-        table[name] = table[name].round(4)
+    for name in ("x_um", "y_um", "heading_rad", "length_um"):
+        if name in table:
+            table[name] = table[name].round(4)
     text: str = table.to_csv(index=False, lineterminator="\r\n")
     return text
 

@@ -25,6 +25,10 @@ _RULES = {
         "Took a step too long for its speed: most likely two tracers joined to one track.",
         "clean.jump",
     ),
+    "unclear": (
+        "Was cut by the edge of the field or hidden by others in all but two frames or fewer.",
+        "",
+    ),
     "short": ("Has fewer than three positions: no track yet, but counted.", ""),
 }
 

@@ -176,7 +176,7 @@ def speed_error(
             errors.append(found.speed_um_s[track] / speeds[owner] - 1)
     if not errors:
         return "-"
-    return f"{100 * np.median(errors):+.1f}/{100 * np.median(np.abs(errors)):.1f}"
+    return f"{100 * np.nanmedian(errors):+.2f}/{100 * np.nanmedian(np.abs(errors)):.1f}"
 
 
 def rows_of_tracks(found: Followed, pairs: Pairing) -> list[tuple[int, NDArray[np.int64]]]:
@@ -191,7 +191,7 @@ def median_over_tracks(
 ) -> float:
     """Median over the tracks of a number of each."""
     values = [of_track(rows) for _, rows in rows_of_tracks(found, pairs)]
-    return float(np.median(values)) if values else float("nan")
+    return float(np.nanmedian(values)) if values else float("nan")
 
 
 def print_condition(case: Case, *, repeats: int) -> None:

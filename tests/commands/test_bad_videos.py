@@ -54,14 +54,6 @@ def test_exposure_longer_than_the_interval_of_the_file(desk, video):
     )
 
 
-def test_filaments_in_a_video(desk, video):
-    assert refused(desk, f"{video},dots,d1,c1,filament,,,") == (
-        "Error: assay.csv, row 2, v.ome.tif: the sheet says shape `filament` for a video; expected "
-        "`spot`: filaments cannot be followed in videos yet, only spots that ride on them. Give a "
-        "track table of the filaments instead.\n"
-    )
-
-
 def test_no_shape_for_a_video(desk, video):
     assert refused(desk, f"{video},dots,d1,c1,,,,") == (
         "Error: assay.csv, row 2: the shape is not given for the video 'v.ome.tif'; expected in "

@@ -118,7 +118,8 @@ def test_prepared_recording_and_its_row_agree(table):
     assert result.sha256 == hashlib.sha256(table.read_bytes()).hexdigest()
     assert result.tracks_seen == 6
     assert result.tracks_kept == clean.clean.kept.sum() == 4
-    assert result.set_aside == {"stuck": 2, "pivoting": 0, "detached": 0, "jump": 0, "short": 0}
+    none = dict.fromkeys(("pivoting", "detached", "jump", "short", "unclear"), 0)
+    assert result.set_aside == {"stuck": 2, **none}
     assert (clean.minutes, clean.field, clean.day, clean.chamber) == (4.0, "f1", "d1", "c1")
     assert clean.field_um == result.field_um
     # SD of 0.03 µm from 6 tracks of 20 positions, two coordinates each.
