@@ -81,12 +81,16 @@ def estimates() -> dict[str, Estimate]:
         "mean_speed_um_s": (0.7912, 0.7571, 0.8253),
         "running_fraction": (NAN, NAN, NAN),
         "turning_rate_rad_s": (-0.0004, -0.0061, 0.0053),
+        "stop_rate_per_s": (NAN, NAN, NAN),
+        "go_rate_per_s": (NAN, NAN, NAN),
         "sideways_diffusion_um2_s": (NAN, NAN, NAN),
         "further_error_along_um": (NAN, NAN, NAN),
         "frame_speed_um_s": (0.8531, 0.8204, 0.8858),
     }
     problems = {
         "running_fraction": "The active model knows no pauses.",
+        "stop_rate_per_s": "The active model knows no pauses.",
+        "go_rate_per_s": "The active model knows no pauses.",
         "sideways_diffusion_um2_s": "A filament follows its path.",
         "further_error_along_um": "Taken as equal in all directions.",
         "translational_diffusion_um2_s": "Not told apart from localization error.",
