@@ -13,6 +13,7 @@ from glidefit.results import (
     Estimate,
     LevelSpread,
     ModelCheck,
+    ModelEvidence,
     RecordingResult,
     SettingRow,
     TrackResult,
@@ -153,6 +154,33 @@ def check_rows(checks: Iterable[ModelCheck]) -> tuple[CheckRow, ...]:
             holds=check.holds,
         )
         for check in checks
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class EvidenceRow:
+    """One number from which the model was chosen, as text."""
+
+    model: str
+    name: str
+    value: str
+    needed: str
+    speaks: str  # "for" or "against"
+    meaning: str
+
+
+def evidence_rows(evidence: Iterable[ModelEvidence]) -> tuple[EvidenceRow, ...]:
+    """What spoke for and against each model that could have been chosen."""
+    return tuple(
+        EvidenceRow(
+            model=one.model,
+            name=one.name,
+            value=significant(one.value),
+            needed=f"above {one.needed:.2g}",
+            speaks="for" if one.speaks_for else "against",
+            meaning=one.meaning,
+        )
+        for one in evidence
     )
 
 

@@ -54,6 +54,7 @@ def condition_page(study: StudyResult, condition: ConditionResult) -> str:
         outcomes=outcomes(condition.counts, study.settings),
         figures=figures,
         checks=page_rows.check_rows(condition.model_checks),
+        evidence=page_rows.evidence_rows(condition.model_evidence),
         spread=page_rows.spread_tables(condition.spread),
         variation=page_rows.variation_tables(condition.variation),
         recordings=rows,

@@ -36,7 +36,7 @@ def test_interval_names_its_level_and_what_it_covers(study):
     others = {r.quantity.key: r for r in page_rows.other_estimates(study.conditions[0])}
     assert others["translational_diffusion_um2_s"].interval == "95 % interval: at most 9.4 × 10⁻⁴"
     assert others["smallest_speed_um_s"].interval == "no interval"
-    assert others["running_fraction"].absent
+    assert others["go_rate_per_s"].absent
     assert not others["translational_diffusion_um2_s"].absent
 
 
