@@ -39,7 +39,14 @@ _UNSEEN_DRIFT = 0.03
 _UNNOTICED_SHARE = 0.5
 
 
-def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str) -> CleanTracks:
+def clean(
+    tracks: Tracks,
+    *,
+    frame_s: float,
+    settings: CleanSettings,
+    where: str,
+    resting: Tracks | None = None,
+) -> CleanTracks:
     """Verdict on every track of one recording.
 
     Parameters
@@ -51,6 +58,8 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     settings : CleanSettings
     where : str
         Names the recording in errors.
+    resting : Tracks, optional
+        Specks that are no tracers, from which drift may be seen too.
 
     Raises
     ------
@@ -59,25 +68,27 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     """
     tracks, flagged, unclear = _without_flagged(tracks)
     noise = _noise(tracks, where)
-    shift, drift = _drift(tracks, noise, frame_s, settings)
+    rest = _noise_of_rest(tracks, noise)
+    shift, drift = _drift(tracks, resting, rest, frame_s, settings)
     if drift.subtracted:
         tracks = _shifted(tracks, shift)
         flagged = None if flagged is None else _shifted(flagged, shift)
         noise = _noise(tracks, where)
-    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
-    reason = _reasons(tracks, measured, noise, settings)
+        rest = _noise_of_rest(tracks, noise)
+    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=rest)
+    reason = _reasons(tracks, measured, rest, settings)
     duration = _duration(tracks, frame_s)
     long_enough = tracks.n_positions >= MIN_POSITIONS
     gliding = (reason == KEPT) & (measured.lag > 0)
     typical = _median(measured.speed_um_frame[gliding]) / frame_s
     noticed = motion.smallest_noticed_speed(
-        tracks.n_positions.astype(np.float64), duration, noise=noise, multiple=settings.stuck
+        tracks.n_positions.astype(np.float64), duration, noise=rest, multiple=settings.stuck
     )
     if not drift.measured and np.isfinite(typical):
         slowest = _UNSEEN_DRIFT * typical
-        creeping = measured.extent_um <= slowest * duration + _STEP_NOISE * noise
+        creeping = measured.extent_um <= slowest * duration + _STEP_NOISE * rest
         # Of a short track so small an extent says nothing.
-        creeping &= typical * duration > 2 * (slowest * duration + _STEP_NOISE * noise)
+        creeping &= typical * duration > 2 * (slowest * duration + _STEP_NOISE * rest)
         reason[(reason == KEPT) & creeping] = STUCK
         noticed = np.maximum(noticed, slowest)
     reason[unclear] = UNCLEAR
@@ -170,9 +181,39 @@ def _reasons(
     return reason
 
 
+def _noise_of_rest(tracks: Tracks, noise: float) -> float:
+    """Scatter of a coordinate of what rests; of filaments the mean of along and across."""
+    if tracks.heading_rad is None or not np.all(np.isfinite(tracks.heading_rad)):
+        return noise
+    t = tracks
+    each = motion.noise_along(t.frame, t.offsets, t.x_um, t.y_um, tracks.heading_rad)
+    along = motion.common_noise(each, t.n_positions)
+    return max(noise, float(np.sqrt((noise**2 + along**2) / 2)))
+
+
+def _with(tracks: Tracks, resting: Tracks | None) -> Tracks:
+    """Positions of both, and nothing else of them."""
+    if resting is None or resting.n_tracks == 0:
+        return tracks
+    ends = resting.offsets[1:] + tracks.offsets[-1]
+    return Tracks(
+        label=np.concatenate([tracks.label, resting.label]),
+        offsets=np.concatenate([tracks.offsets, ends]),
+        frame=np.concatenate([tracks.frame, resting.frame]),
+        time_s=np.concatenate([tracks.time_s, resting.time_s]),
+        x_um=np.concatenate([tracks.x_um, resting.x_um]),
+        y_um=np.concatenate([tracks.y_um, resting.y_um]),
+    )
+
+
 def _drift(
-    tracks: Tracks, noise: float, frame_s: float, settings: CleanSettings
+    tracks: Tracks,
+    resting: Tracks | None,
+    noise: float,
+    frame_s: float,
+    settings: CleanSettings,
 ) -> tuple[tuple[Floats, Floats], Drift]:
+    tracks = _with(tracks, resting)
     n_frames = int(tracks.frame.max()) + 1
     still = np.zeros(n_frames), np.zeros(n_frames)
     if settings.drift == "off":
