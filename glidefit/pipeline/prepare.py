@@ -55,6 +55,7 @@ class Tracked:
     exposure_source: str
     field_um: tuple[float, float]
     notes: tuple[str, ...]
+    specks: Tracks | None = None  # of a video of filaments: what rests and is none
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -77,7 +78,13 @@ def prepare(task: Task) -> Prepared:
     recording, settings = task.recording, task.settings
     tracked = track(task)
     where = f"{recording.where}, {recording.name}"
-    cleaned = clean(tracked.tracks, frame_s=tracked.frame_s, settings=settings.clean, where=where)
+    cleaned = clean(
+        tracked.tracks,
+        frame_s=tracked.frame_s,
+        settings=settings.clean,
+        where=where,
+        resting=tracked.specks,
+    )
     exposure = tracked.exposure_s
     if np.isnan(exposure):
         exposure = settings.fit.unknown_exposure * tracked.frame_s
@@ -299,6 +306,7 @@ def filaments(
         detect=settings.detect,
         link=settings.link,
         where=f"{recording.where}, {recording.name}",
+        exposure_s=video.exposure_s,
     )
 
 
@@ -327,7 +335,7 @@ def _from_video(task: Task) -> Tracked:
     """Tracks of the tracers in a video."""
     video = open_video(task.recording)
     find = _spot_tracks if task.recording.shape == "spot" else _filament_tracks
-    tracks, n_frames, notes = find(task, video)
+    tracks, specks, n_frames, notes = find(task, video)
     facts = video.facts
     return Tracked(
         tracks=tracks,
@@ -341,10 +349,14 @@ def _from_video(task: Task) -> Tracked:
         exposure_source=video.exposure_source,
         field_um=(facts.width_px * video.pixel_um, facts.height_px * video.pixel_um),
         notes=(*facts.notes, *notes),
+        specks=specks,
     )
 
 
-def _filament_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[str, ...]]:
+_Found = tuple[Tracks, Tracks | None, int, tuple[str, ...]]
+
+
+def _filament_tracks(task: Task, video: OpenVideo) -> _Found:
     recording, settings = task.recording, task.settings
     found = filaments(recording, video, settings=settings)
     if found.tracks.n_tracks == 0:
@@ -356,10 +368,10 @@ def _filament_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[s
             remedy="Look at the video; lower detect.threshold, or correct detect.spot_diameter or "
             "detect.contrast.",
         )
-    return found.tracks, found.n_frames, found.notes
+    return found.tracks, found.specks, found.n_frames, found.notes
 
 
-def _spot_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[str, ...]]:
+def _spot_tracks(task: Task, video: OpenVideo) -> _Found:
     from glidefit.steps.link import link
 
     recording, settings = task.recording, task.settings
@@ -374,7 +386,7 @@ def _spot_tracks(task: Task, video: OpenVideo) -> tuple[Tracks, int, tuple[str, 
         )
     times = video.times(detections.n_frames)
     tracks, notes = link(detections, times_s=times, settings=settings.link, where=where)
-    return tracks, detections.n_frames, notes
+    return tracks, None, detections.n_frames, notes
 
 
 def _agreed(

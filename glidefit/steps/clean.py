@@ -44,7 +44,14 @@ _UNSEEN_DRIFT = 0.03
 _EXTENT_OF_RADIUS = 2 * np.sqrt(2.0)
 
 
-def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str) -> CleanTracks:
+def clean(
+    tracks: Tracks,
+    *,
+    frame_s: float,
+    settings: CleanSettings,
+    where: str,
+    resting: Tracks | None = None,
+) -> CleanTracks:
     """Verdict on every track of one recording.
 
     Parameters
@@ -56,6 +63,8 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     settings : CleanSettings
     where : str
         Names the recording in errors.
+    resting : Tracks, optional
+        Specks that are no tracers, from which drift may be seen too.
 
     Raises
     ------
@@ -64,13 +73,15 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
     """
     tracks, flagged, unclear = _without_flagged(tracks)
     noise = _noise(tracks, where)
-    shift, drift = _drift(tracks, noise, frame_s, settings)
+    rest = _noise_of_rest(tracks, noise)
+    shift, drift = _drift(tracks, resting, rest, frame_s, settings)
     if drift.subtracted:
         tracks = _shifted(tracks, shift)
         flagged = None if flagged is None else _shifted(flagged, shift)
         noise = _noise(tracks, where)
-    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=noise)
-    jump = _jumps(measured, noise, settings)
+        rest = _noise_of_rest(tracks, noise)
+    measured = motion.measure(tracks.frame, tracks.offsets, tracks.x_um, tracks.y_um, noise=rest)
+    jump = _jumps(measured, rest, settings)
     long_enough = tracks.n_positions >= MIN_POSITIONS
     creep = _DRIFT_SLACK if drift.measured else _UNSEEN_DRIFT
     states = state_probabilities(
@@ -78,17 +89,17 @@ def clean(tracks: Tracks, *, frame_s: float, settings: CleanSettings, where: str
         tracks.offsets,
         tracks.x_um,
         tracks.y_um,
-        noise=noise,
+        noise=rest,
         speed=measured.speed_um_frame,
         radius=settings.pivot_extent / _EXTENT_OF_RADIUS,
         creep=creep,
         eligible=long_enough & ~jump,
     )
-    reason = _reasons(tracks, measured, states, jump, noise=noise, settings=settings)
+    reason = _reasons(tracks, measured, states, jump, noise=rest, settings=settings)
     reason[unclear] = UNCLEAR
     gliding = (reason == KEPT) & (measured.lag > 0)
     duration = _duration(tracks, frame_s)
-    noticed = smallest_noticed_speed(tracks.n_positions.astype(np.float64), duration, noise=noise)
+    noticed = smallest_noticed_speed(tracks.n_positions.astype(np.float64), duration, noise=rest)
     noticed = np.maximum(noticed, states.slowest / frame_s)
     surest = np.fmax(states.gliding, 1 - states.gliding)
     return CleanTracks(
@@ -190,9 +201,39 @@ def _reasons(
     return reason
 
 
+def _noise_of_rest(tracks: Tracks, noise: float) -> float:
+    """Scatter of a coordinate of what rests; of filaments the mean of along and across."""
+    if tracks.heading_rad is None or not np.all(np.isfinite(tracks.heading_rad)):
+        return noise
+    t = tracks
+    each = motion.noise_along(t.frame, t.offsets, t.x_um, t.y_um, tracks.heading_rad)
+    along = motion.common_noise(each, t.n_positions)
+    return max(noise, float(np.sqrt((noise**2 + along**2) / 2)))
+
+
+def _with(tracks: Tracks, resting: Tracks | None) -> Tracks:
+    """Positions of both, and nothing else of them."""
+    if resting is None or resting.n_tracks == 0:
+        return tracks
+    ends = resting.offsets[1:] + tracks.offsets[-1]
+    return Tracks(
+        label=np.concatenate([tracks.label, resting.label]),
+        offsets=np.concatenate([tracks.offsets, ends]),
+        frame=np.concatenate([tracks.frame, resting.frame]),
+        time_s=np.concatenate([tracks.time_s, resting.time_s]),
+        x_um=np.concatenate([tracks.x_um, resting.x_um]),
+        y_um=np.concatenate([tracks.y_um, resting.y_um]),
+    )
+
+
 def _drift(
-    tracks: Tracks, noise: float, frame_s: float, settings: CleanSettings
+    tracks: Tracks,
+    resting: Tracks | None,
+    noise: float,
+    frame_s: float,
+    settings: CleanSettings,
 ) -> tuple[tuple[Floats, Floats], Drift]:
+    tracks = _with(tracks, resting)
     n_frames = int(tracks.frame.max()) + 1
     still = np.zeros(n_frames), np.zeros(n_frames)
     if settings.drift == "off":

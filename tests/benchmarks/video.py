@@ -206,7 +206,7 @@ def print_condition(case: Case, *, repeats: int) -> None:
         for chamber in range(3):
             own = dataclasses.replace(case, seed=1000 + 3 * experiment + chamber)
             done = filament_tracks(Film(own.video).images(), own)
-            recordings.append(cleaned(done.tracks, own, chamber=f"c{chamber}"))
+            recordings.append(cleaned(done.tracks, own, chamber=f"c{chamber}", resting=done.specks))
         numbers = condition_numbers(
             recordings, settings=settings, rng=np.random.default_rng(experiment)
         )

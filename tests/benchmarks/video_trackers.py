@@ -138,7 +138,7 @@ def glidefit(images: Images, case: Case) -> Followed | None:
         length_um=tracks.length_um,
         head_x_um=None if head is None else head[:, 0],
         head_y_um=None if head is None else head[:, 1],
-        speed_um_s=fitted_speeds(tracks, case),
+        speed_um_s=fitted_speeds(tracks, case, resting=None if case.spots else done.specks),
     )
 
 
@@ -157,7 +157,7 @@ def filament_tracks(images: Images, case: Case):
     )
 
 
-def cleaned(tracks, case: Case, *, chamber: str = "c1"):
+def cleaned(tracks, case: Case, *, chamber: str = "c1", resting=None):
     """Tracks as the fit takes them, from a chamber of their own."""
     from glidefit.evidence import CleanRecording
     from glidefit.steps.clean import clean
@@ -168,7 +168,13 @@ def cleaned(tracks, case: Case, *, chamber: str = "c1"):
         day="2026-03-02",
         chamber=chamber,
         field="f1",
-        clean=clean(tracks, frame_s=case.frame_s, settings=Settings().clean, where="film"),
+        clean=clean(
+            tracks,
+            frame_s=case.frame_s,
+            settings=Settings().clean,
+            where="film",
+            resting=resting,
+        ),
         frame_s=case.frame_s,
         exposure_s=case.exposure_s,
         field_um=case.field_um,
@@ -176,11 +182,11 @@ def cleaned(tracks, case: Case, *, chamber: str = "c1"):
     )
 
 
-def fitted_speeds(tracks, case: Case) -> dict[int, float]:
+def fitted_speeds(tracks, case: Case, *, resting=None) -> dict[int, float]:
     """Speed of each kept track by the likelihood of all."""
     from glidefit.steps.fit import fit
 
-    recording = cleaned(tracks, case)
+    recording = cleaned(tracks, case, resting=resting)
     kept = np.flatnonzero(recording.clean.kept)
     if len(kept) == 0:
         return {}

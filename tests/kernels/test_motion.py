@@ -128,3 +128,18 @@ def test_a_single_position_has_no_motion():
     one = measured((np.array([4]), np.array([1.0]), np.array([2.0])))
     assert one.lag[0] == 0
     assert one.spread_um[0] == 0
+
+
+def test_noise_along_a_body_is_told_from_that_across():
+    rng = np.random.default_rng(12)
+    n, heading = 4000, 0.7
+    along, across = rng.normal(0, 0.05, n), rng.normal(0, 0.01, n)
+    s = 0.4 * np.arange(n) + along
+    x = s * np.cos(heading) - across * np.sin(heading)
+    y = s * np.sin(heading) + across * np.cos(heading)
+    frame, offsets = np.arange(n), np.array([0, n])
+    found = motion.noise_along(frame, offsets, x, y, np.full(n, heading + np.pi))
+    # A median of 4000 overlapping differences: 2 %, so 4 standard errors are 8 %.
+    assert_allclose(found, 0.05, rtol=0.08)
+    short = motion.noise_along(frame[:2], np.array([0, 2]), x[:2], y[:2], np.zeros(2))
+    assert np.isnan(short).all()

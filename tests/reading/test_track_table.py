@@ -555,3 +555,11 @@ def test_tracks_come_back_identical_from_every_form(tmp_path, written, random):
     order = sorted(range(len(table)), key=lambda i: (expected.index[i], random.random()))
     path = write(tmp_path, in_memory(table.iloc[order], ","))
     same(read(path, frame_s=interval).tracks, expected)
+
+
+def test_flags_say_which_positions_are_not_trusted(tmp_path):
+    text = "track,frame,x_um,y_um,flag\na,1,2,3,cut by the edge\na,0,1,3,\nb,0,5,5,\n"
+    tracks = read(write(tmp_path, text)).tracks
+    assert tracks.flag.tolist() == ["", "cut by the edge", ""]
+    bare = read(write(tmp_path, text.replace("cut by the edge", ""))).tracks
+    assert bare.flag is None

@@ -62,3 +62,29 @@ def test_without_flags_nothing_changes():
     result = cleaned(tracks)
     assert result.flagged is None
     assert_allclose(result.tracks.x_um, tracks.x_um)
+
+
+def test_specks_show_drift_and_filaments_at_rest_are_stuck():
+    tracks = gliders(n=6)
+    rng = np.random.default_rng(6)
+    x, _y, drift = tracks.x_um.copy(), tracks.y_um, 0.004 * tracks.frame
+    # Along its body a filament is known less well than across.
+    x += rng.normal(0, 0.06, len(x))
+    rest = tracks.index == 5
+    x[rest] = 7.0 + rng.normal(0, 0.06, rest.sum())
+    bodies = dataclasses.replace(tracks, x_um=x + drift, heading_rad=np.zeros(len(x)))
+    n = 4 * 30
+    frame = np.tile(np.arange(30), 4)
+    specks = Tracks(
+        label=np.array(["a", "b", "c", "d"]),
+        offsets=np.arange(5) * 30,
+        frame=frame,
+        time_s=0.5 * frame,
+        x_um=np.repeat([3.0, 9.0, 2.0, 8.0], 30) + 0.004 * frame + rng.normal(0, 0.02, n),
+        y_um=np.repeat([3.0, 9.0, 12.0, 18.0], 30) + rng.normal(0, 0.02, n),
+    )
+    result = clean(bodies, frame_s=0.5, settings=CleanSettings(), where="a.tif", resting=specks)
+    assert result.drift.subtracted
+    assert_allclose(result.drift_x_um[-1], 29 * 0.004, atol=0.03)
+    assert result.tracks.n_tracks == 6
+    assert_array_equal(result.reason, ["", "", "", "", "", "stuck"])

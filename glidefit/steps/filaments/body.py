@@ -107,6 +107,7 @@ class Body:
     lengths: int = 0  # frames that the length comes from
     disagreed: int = 0  # frames in a row in which the ends did not fit the length
     doubled: int = 0  # frames in a row in which it lay on another one
+    hidden: int = 0  # frames in a row in which its place could not be trusted
     doubts: int = 0  # frames in which something spoke against its contour, less those in which not
     travelled: float = 0.0
     rows: list[Row] = field(default_factory=list)

@@ -11,7 +11,13 @@ from scipy.optimize import linear_sum_assignment
 
 from glidefit.kernels import contours, ridges
 from glidefit.steps.filaments.body import Body, Seen, born
-from glidefit.steps.filaments.measuring import Scene, expected, measure_expected, measure_traced
+from glidefit.steps.filaments.measuring import (
+    HIDDEN,
+    Scene,
+    expected,
+    measure_expected,
+    measure_traced,
+)
 
 Floats = NDArray[np.float64]
 
@@ -30,6 +36,8 @@ _OWNED = 2.5
 _LARGEST_COST = 16.0
 # A body is given up after so many doubts; a dark stretch of so many pixels is one.
 _DOUBTED, _DARK = 3, 6
+# A filament may be hidden for so many frames, and for as long as it takes to pass.
+_HIDDEN_FRAMES = 10
 # Ends are together within so many pixels and to this cosine.
 _END_TO_END, _STRAIGHT = 6.0, 0.93
 # Curves that are followed up in one frame.
@@ -60,7 +68,10 @@ def follow(state: Following, frame: int, scene: Scene) -> None:
     seen = _known_ones(scene, known, frame)
     for body, (now, moved) in seen:
         body.take(frame, now, moved)
+        body.hidden = body.hidden + 1 if now.flag == HIDDEN else 0
         _own(scene, body)
+    _give_up_hidden(state, [b for b, _ in seen])
+    seen = [(b, s) for b, s in seen if b in state.bodies]
     _drop_doubles(state, scene, [b for b, _ in seen])
     curves = _new_curves(state, scene)
     waiting = [b for b in state.bodies if b.frame < frame]
@@ -132,6 +143,17 @@ def _own(scene: Scene, body: Body) -> None:
     first, last = max(math.floor(seen.tail - 2), 0), math.ceil(seen.head + 3)
     x, y = seen.x[first:last], seen.y[first:last]
     ridges.own(scene.owner, x, y, _OWNED * scene.profile, body.number + 1)
+
+
+def _give_up_hidden(state: Following, bodies: list[Body]) -> None:
+    """A filament that never comes out from under others ends where it was last seen."""
+    for body in bodies:
+        passing = body.length / max(abs(body.speed), 0.5)
+        if body.hidden > _HIDDEN_FRAMES + passing:
+            del body.rows[-body.hidden :]
+            state.bodies.remove(body)
+            if body.rows:
+                state.ended.append(body)
 
 
 def _drop_doubles(state: Following, scene: Scene, bodies: list[Body]) -> None:

@@ -43,6 +43,7 @@ class Scene:
     others: NDArray[np.float32]  # light of filaments that are near each other
     owner: NDArray[np.int32]
     threshold: float  # multiples of the noise
+    exposed_share: float = 0.0  # of the frame interval
 
     @property
     def profile(self) -> float:
@@ -104,7 +105,8 @@ def _finished(
     usual: float,
     speed: float,
 ) -> Seen:
-    blur = scene.profile
+    # An end that moves during the exposure is drawn out.
+    blur = math.hypot(scene.profile, scene.exposed_share * speed / math.sqrt(12))
     tail, head, tail_sd, head_sd = contours.fit_ends(
         amplitude, weight, tail, head, blur, blur, usual
     )
@@ -215,7 +217,7 @@ def measure_expected(
         amplitude, weight, tail - back - more, min(tail + forth, head), max(head - back, tail),
         head + forth + more, body.light,
     )  # fmt: skip
-    seen = _finished(scene, x, y, rough_tail, rough_head, amplitude, weight, body.light, step)
+    seen = _finished(scene, x, y, rough_tail, rough_head, amplitude, weight, body.light, body.speed)
     if seen.significance == 0.0 or _visible(weight, seen) < _SHORTEST:
         return None
     if seen.share > 0.5 and (

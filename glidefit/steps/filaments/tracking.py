@@ -40,6 +40,8 @@ class FilamentTracks:
     ----------
     tracks : Tracks
         Midpoints of contours, with heading, length and flag.
+    specks : Tracks
+        What rests and is no longer than a spot: no filaments, but they show drift.
     contour_offsets : (n + 1,) array of int
         Position i has the points ``contour_offsets[i]:contour_offsets[i + 1]``.
     contour_um : (m, 2) array
@@ -52,6 +54,7 @@ class FilamentTracks:
     """
 
     tracks: Tracks
+    specks: Tracks
     contour_offsets: Ints
     contour_um: NDArray[np.float32]
     n_frames: int
@@ -68,6 +71,7 @@ def track_filaments(
     detect: DetectSettings,
     link: LinkSettings,
     where: str,
+    exposure_s: float = 0.0,
 ) -> FilamentTracks:
     """Filaments of a video, followed by their contours.
 
@@ -89,6 +93,8 @@ def track_filaments(
         Largest speed and gap.
     where : str
         The recording, for messages.
+    exposure_s : float
+        Of a frame, for the blur of ends that move; NaN if unknown, and then taken as 0.
 
     Raises
     ------
@@ -109,6 +115,7 @@ def track_filaments(
         block_px=max(12, round(_BLOCK_WIDTHS * width_px)),
         threshold=detect.threshold,
         where=where,
+        exposed_share=min(exposure_s / interval, 1.0) if exposure_s > 0 else 0.0,
     )
     for number, raw in enumerate(frames):
         follow(state, number, maker.scene(raw))
@@ -118,9 +125,22 @@ def track_filaments(
     filaments = [b for b, s in zip(bodies, speck, strict=True) if not s]
     notes = maker.watch.notes(filaments, crowded=state.crowded)
     if any(speck):
-        notes = (*notes, f"{sum(speck)} resting specks are no longer than a spot; they are no "
-                 "filaments and are left out.")  # fmt: skip
-    return _tracks(filaments, pixel_um=pixel_um, times_s=times_s, maker=maker, notes=notes)
+        are = "specks are" if sum(speck) > 1 else "speck is"
+        notes = (*notes, f"{sum(speck)} resting {are} no longer than a spot, and left out.")
+    specks = [b for b, s in zip(bodies, speck, strict=True) if s]
+    contour = [r.contour[::-1] if b.travelled < 0 else r.contour for b in filaments for r in b.rows]
+    points = np.cumsum([0, *map(len, contour)]).astype(np.int64)
+    every = np.concatenate([np.empty((0, 2)), *contour])
+    return FilamentTracks(
+        tracks=_tracks(filaments, pixel_um, times_s),
+        specks=_tracks(specks, pixel_um, times_s, prefix="speck "),
+        contour_offsets=points,
+        contour_um=every.astype(np.float32) * np.float32(pixel_um),
+        n_frames=len(maker.noise),
+        noise=np.array(maker.noise),
+        background=np.array(maker.background),
+        notes=notes,
+    )
 
 
 def _width(detect: DetectSettings, pixel_um: float, where: str) -> float:
@@ -159,6 +179,7 @@ class _SceneMaker:
     block_px: int
     threshold: float
     where: str
+    exposed_share: float
     watch: Watch = field(default_factory=Watch)
     noise: list[float] = field(default_factory=list)
     background: list[float] = field(default_factory=list)
@@ -198,6 +219,7 @@ class _SceneMaker:
             others=self.others,
             owner=self.owner,
             threshold=self.threshold,
+            exposed_share=self.exposed_share,
         )
 
 
@@ -217,22 +239,13 @@ def _specks(bodies: list[Body], width_px: float, usual_step: float) -> list[bool
     return result
 
 
-def _tracks(
-    bodies: list[Body],
-    *,
-    pixel_um: float,
-    times_s: Floats,
-    maker: _SceneMaker,
-    notes: tuple[str, ...],
-) -> FilamentTracks:
+def _tracks(bodies: list[Body], pixel_um: float, times_s: Floats, *, prefix: str = "") -> Tracks:
     rows = [(row, b.travelled < 0) for b in bodies for row in b.rows]
-    counts = [len(b.rows) for b in bodies]
     frame = np.array([r.frame for r, _ in rows], dtype=np.int64)
     heading = np.array([r.heading + math.pi * back for r, back in rows])
-    contour = [r.contour[::-1] if back else r.contour for r, back in rows]
-    tracks = Tracks(
-        label=np.array([str(k + 1) for k in range(len(bodies))], dtype=np.str_),
-        offsets=np.concatenate([[0], np.cumsum(counts)]).astype(np.int64),
+    return Tracks(
+        label=np.array([f"{prefix}{k + 1}" for k in range(len(bodies))], dtype=np.str_),
+        offsets=np.cumsum([0, *(len(b.rows) for b in bodies)]).astype(np.int64),
         frame=frame,
         time_s=times_s[frame],
         x_um=np.array([r.x_px for r, _ in rows]) * pixel_um,
@@ -240,15 +253,4 @@ def _tracks(
         heading_rad=np.angle(np.exp(1j * heading)),
         length_um=np.array([r.length_px for r, _ in rows]) * pixel_um,
         flag=np.array([r.flag for r, _ in rows], dtype=np.str_),
-    )
-    points = [len(c) for c in contour]
-    return FilamentTracks(
-        tracks=tracks,
-        contour_offsets=np.concatenate([[0], np.cumsum(points)]).astype(np.int64),
-        contour_um=np.concatenate([np.empty((0, 2)), *contour]).astype(np.float32)
-        * np.float32(pixel_um),
-        n_frames=len(maker.noise),
-        noise=np.array(maker.noise),
-        background=np.array(maker.background),
-        notes=notes,
     )
