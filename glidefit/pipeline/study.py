@@ -202,7 +202,7 @@ def _estimates(numbers: ConditionNumbers, *, settings: Settings) -> dict[str, Es
         del known["turning_rate_rad_s"]
     if "pausing" not in numbers.fitted.model:
         known = summarise.without_pauses(known, level=settings.interval.level)
-    given = settings.fit.known
+    given = numbers.fitted.known
     for name, key in (
         ("sideways_diffusion", "sideways_diffusion_um2_s"),
         ("error_variance_along", "further_error_along_um"),

@@ -36,6 +36,8 @@ def test_fit_of_tracked_videos_gives_what_run_gives(desk, study, tracked):
         # Track tables are rounded to 0.1 nm, 1 % of the localization error of these spots; it
         # is the error itself and what it is subtracted from that feel it most.
         rounded = 5e-3 if "dots" in key else 0
+        # The climb ends within 0.02 standard errors, and one of a spread is about all of it.
+        rounded = 2e-2 if key == ("dots", "speed_spread_um_s") else rounded
         assert_allclose(two[key], estimate, rtol=rounded, atol=1e-9, err_msg=str(key))
 
 

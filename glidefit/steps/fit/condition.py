@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.evidence import ChamberEvidence, CleanRecording
+from glidefit.fit_parameters import FitParameters
 from glidefit.kernels import msd_fit
 from glidefit.results import ModelEvidence
 from glidefit.settings import FitSettings
@@ -51,6 +52,8 @@ class ConditionFit:
         Normalised innovations of all tracks in the likelihood; empty without one.
     method : str
         "likelihood" or "msd".
+    known : FitParameters
+        What was held, bounded and freed.
     longest_lag_s : float
     pooled : (4,) array
         Parameters of all tracks in one pot, for reading speeds off single lags.
@@ -69,6 +72,7 @@ class ConditionFit:
     left_out: int
     innovation: Floats
     method: str
+    known: FitParameters
     longest_lag_s: float
     pooled: Floats
     model: str
@@ -107,12 +111,13 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
                 method=settings.method,
                 turning=turning,
                 pauses=pauses,
-                known=settings.known,
+                known=known,
                 clock=settings.clock,
             )
             for own in members
         ]
 
+    known = _known(settings, kept)
     results, pauses = _with_or_without_pauses(fitted, settings)
     variance = _speed_variance([result.evidence for result in results])
     corrected = ["msd_speed"] if settings.method == "likelihood" else ["msd_speed", "speed"]
@@ -127,6 +132,7 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         left_out=sum(result.left_out for result in results),
         innovation=np.concatenate([result.innovation for result in results]),
         method=settings.method,
+        known=known,
         longest_lag_s=longest,
         pooled=pooled.values,
         model=_model(turning, pauses),
@@ -134,6 +140,15 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         evidence=() if settings.method == "msd" else (*turning.evidence, *pauses.evidence),
         problems=tuple(result.problem for result in results if result.problem),
     )
+
+
+def _known(settings: FitSettings, kept: Sequence[Kept]) -> FitParameters:
+    """What a person says of the parameters; and the middle of a contour errs more along it."""
+    known, further = settings.known, "error_variance_along"
+    measured = any(one.tracks.length_um is not None for one in kept)
+    if not measured or further in known.freed or further in known.fixed:
+        return known
+    return replace(known, freed=(*known.freed, further))
 
 
 def _with_or_without_pauses(
