@@ -78,7 +78,10 @@ class CleanSettings(_Section):
     """Which tracks are set aside, and whether stage drift is taken out."""
 
     stuck: float = setting(
-        2.0, "× noise", "A track that strays no farther than this from its mean is stuck.", ge=1
+        2.0,
+        "× noise",
+        "What does not glide and strays no farther than this from its mean is stuck.",
+        ge=1,
     )
     odds: float = setting(
         3.0,

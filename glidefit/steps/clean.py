@@ -323,19 +323,23 @@ def closest_miss(cleaned: CleanTracks, reason: str) -> tuple[float, str]:
         return float("-inf"), ""
     t, noise = cleaned.tracks, cleaned.noise_um
     m = motion.measure(t.frame, t.offsets, t.x_um, t.y_um, noise=noise)
-    if reason in (STUCK, PIVOTING, DETACHED):
-        value, bound = cleaned.gliding_probability, np.full(t.n_tracks, 0.5)
-        reached, advice = value / bound, "if they do glide, film longer"
-        what = "glides with a probability of {value:.2g}; it must reach {limit:.3g}"
+    told = "and glides with a probability of {limit:.2g}; it must reach 0.5"
+    advice = "if they do glide, film longer"
+    value, bound = m.spread_um / max(noise, 1e-12), cleaned.gliding_probability
+    reached = bound / 0.5
+    if reason == STUCK:
+        what = "strays {value:.2g} × noise from its mean " + told
+    elif reason == PIVOTING:
+        what, value = "goes round within {value:.2g} µm " + told, m.extent_um
+    elif reason == DETACHED:
+        what, value = "has a mean cosine of {value:.2g} between displacements " + told, m.advance
     elif reason == JUMP:
-        reached, advice = -m.longest_step_um, "if they do glide, change clean.jump"
-        what = "has a step of {value:.2g} µm in one frame"
-        value, bound = m.longest_step_um, m.longest_step_um
+        what, value = "has a step of {value:.2g} µm in one frame", m.longest_step_um
+        reached, advice = -value, "if they do glide, change clean.jump"
     else:
-        reached = t.n_positions / MIN_POSITIONS
-        advice = "if they do glide, change link.max_gap"
         what = "has {value:.0f} positions; a track needs {limit:.0f}"
         value, bound = t.n_positions.astype(float), np.full(t.n_tracks, float(MIN_POSITIONS))
+        reached, advice = value / bound, "if they do glide, change link.max_gap"
     reached = np.where(chosen & np.isfinite(reached), reached, -np.inf)
     best = int(np.argmax(reached))
     said = what.format(value=value[best], limit=bound[best])

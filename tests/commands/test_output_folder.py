@@ -115,9 +115,9 @@ def test_nothing_left_to_fit_names_the_rule_and_leaves_the_report(desk, report):
     for line, n in zip(lines, (6, 3), strict=True):
         assert f"{n} stuck" in line
         assert re.search(
-            rf"The nearest of the {n} stuck tracks, \d, strays [\d.]+ × noise from its mean; it "
-            r"must exceed [\d.]+ × noise \(clean\.stuck\)\. Look at the tracks; if they do glide, "
-            r"change that setting\.$",
+            rf"The nearest of the {n} stuck tracks, \d, strays [\d.]+ × noise from its mean "
+            r"and glides with a probability of 0\.[\d]+; it must reach 0\.5\. Look at the tracks; "
+            r"if they do glide, film longer\.$",
             line,
         )
 

@@ -204,7 +204,7 @@ def test_the_nearest_miss_names_its_probability(kind):
     nearness, text = closest_miss(found, kind)
     assert nearness < 1.0
     best = found.gliding_probability[found.reason == kind].max()
-    assert f"glides with a probability of {best:.2g}; it must reach 0.5" in text
+    assert f"and glides with a probability of {best:.2g}; it must reach 0.5" in text
     assert f"{(found.reason == kind).sum()} {kind} tracks" in text
 
 

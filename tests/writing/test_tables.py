@@ -95,6 +95,7 @@ def test_tracks_are_listed_once_and_set_aside_ones_again(study):
     assert len(aside) == sum(sum(c.counts.set_aside.values()) for c in study.conditions)
     assert all(row["set_aside_reason"] for row in aside)
     assert {row["speed_um_s"] for row in tracks if row["kept"] == "false"} == {""}
+    assert {row["gliding_probability"] for row in tracks} == {""}  # unknown in these
     first = study.conditions[0].tracks[5]
     assert float(tracks[5]["speed_um_s"]) == pytest.approx(first.speed_um_s, rel=1e-8)
 
@@ -115,6 +116,14 @@ def test_each_track_has_its_own_values_with_their_errors_or_a_reason(study):
     columns = ["speed_error_um_s", *(k for k in first if k.startswith("rotational_diffusion"))]
     assert [first[name] for name in columns] == ["0.01", "0.02", "0.015", "0.027", ""]
     assert [second[name] for name in columns] == ["", "", "", "", "it says nothing"]
+
+
+def test_the_probability_that_a_track_glides_is_in_its_row(study):
+    condition = study.conditions[0]
+    known = dataclasses.replace(condition.tracks[0], gliding_probability=0.97)
+    condition = dataclasses.replace(condition, tracks=(known, *condition.tracks[1:]))
+    text = per_track_table(dataclasses.replace(study, conditions=(condition,)))
+    assert [row["gliding_probability"] for row in rows_of(text)][:2] == ["0.97", ""]
 
 
 def test_comparisons(study, compare):
