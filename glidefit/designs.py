@@ -162,6 +162,8 @@ class FilmedDesign:
     speed_um_s: float
     rotational_diffusion_rad2_s: float
     longitudinal_diffusion_um2_s: float
+    stop_rate_per_s: float  # 0 where filaments do not pause, like the next one
+    go_rate_per_s: float
     filament_spread: float  # of speed, relative SD from filament to filament
     components: tuple[Components, ...]
     notes: tuple[str, ...]

@@ -53,6 +53,10 @@ class GlidingData:
         """Only that of `filtered`, in less time."""
         return self._filtered(values, innovations=False).log_density
 
+    def log_likelihood(self, values: Mapping[str, float]) -> Floats:
+        """Of each track."""
+        return np.add.reduceat(self.log_density(values), self.offsets[:-1])
+
     def _filtered(self, values: Mapping[str, float], *, innovations: bool) -> FilteredTracks:
         pauses: dict[str, Any] = {}
         if "stop_rate" in values:

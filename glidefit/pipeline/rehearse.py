@@ -172,6 +172,8 @@ def _scenario(design: FilmedDesign) -> Scenario:
                 speed_um_s=design.speed_um_s,
                 rotational_diffusion_rad2_s=design.rotational_diffusion_rad2_s,
                 longitudinal_diffusion_um2_s=design.longitudinal_diffusion_um2_s,
+                stop_rate_per_s=design.stop_rate_per_s,
+                start_rate_per_s=design.go_rate_per_s,
                 motile_fraction=min(design.motile_fraction, 1.0),
             ),
         ),

@@ -349,6 +349,7 @@ def _condition(
             resamples=settings.interval.resamples,
             version=glidefit.__version__,
             method=fitted.method,
+            model=fitted.model,
         ),
         model_checks=checks,
         model_evidence=fitted.evidence,

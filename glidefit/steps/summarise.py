@@ -413,7 +413,7 @@ def problems(
 ) -> list[str]:
     """What a reader must know before quoting the numbers, in plain words."""
     out = [f"Not fitted, and left out of the means: {problem}." for problem in fit_problems]
-    out += _misfit(msd)
+    out += _misfit(msd, model)
     if model == "active":
         out += _headings_disagree(estimates, combined, columns)
     out += [
@@ -444,18 +444,18 @@ def problems(
     return out
 
 
-def _misfit(msd: Sequence[Curve]) -> list[str]:
+def _misfit(msd: Sequence[Curve], model: str) -> list[str]:
     """The fitted curve should pass through its points to 5 %, which is beyond any use of it."""
     worst, at = 0.0, 0.0
     for c in msd:
-        for lag, value, model, used in zip(c.lag_s, c.value, c.model, c.fitted, strict=True):
-            if used and model > 0 and abs(np.log(value / model)) > abs(worst):
-                worst, at = float(np.log(value / model)), lag
+        for lag, value, fit, used in zip(c.lag_s, c.value, c.model, c.fitted, strict=True):
+            if used and fit > 0 and abs(np.log(value / fit)) > abs(worst):
+                worst, at = float(np.log(value / fit)), lag
     if abs(worst) < 0.05:
         return []
     return [
         f"The mean squared displacement departs from the fitted curve by {abs(worst):.0%} at a lag "
-        f"of {at:.3g} s: the motion is not that of the active model (pauses, circling, or several "
+        f"of {at:.3g} s: the motion is not that of the {model} model (pauses, circling, or several "
         "populations), or there are too few tracks. Look at the tracks before quoting D_r."
     ]
 
@@ -484,6 +484,11 @@ def _headings_disagree(
     ]
 
 
+_ALSO = {
+    "circling": "Each filament has a turning rate of its own. ",
+    "pausing": "Filaments pause at random with their heading frozen and run on, both at fitted "
+    "rates; v and D_r are those while running. ",
+}
 _FITTED = {
     "likelihood": "fitted to each chamber by maximum likelihood (a Gaussian filter over position, "
     "heading and the speed of each filament), the speed averaged over filament-frames; the mean "
@@ -503,8 +508,10 @@ def methods(
     resamples: int,
     version: str,
     method: str,
+    model: str = "active",
 ) -> str:
     """A methods paragraph to quote."""
+    also = "".join(said for name, said in _ALSO.items() if name in model)
     rates = sorted({f"{r.frame_s:.4g}" for r in recordings})
     aside = ", ".join(f"{n} {name}" for name, n in counted.set_aside.items() if n) or "none"
     return (
@@ -513,7 +520,7 @@ def methods(
         f"Of {counted.tracks_seen} tracks {counted.tracks_kept} were kept; set aside: {aside}. "
         "Speed v and rotational diffusion D_r are those of the active Brownian model in two "
         "dimensions, with diffusion along the heading, localization error and motion blur, "
-        f"{_FITTED[method].format(longest=longest_lag_s)} "
+        f"{_FITTED[method].format(longest=longest_lag_s)} {also}"
         "Persistence length is v/D_r (decay of the heading correlation along the path), path "
         "persistence length v/(2 D_r) (worm-like chain in two dimensions). Chamber values were "
         "averaged within days and days within the condition. Intervals at the "

@@ -178,7 +178,7 @@ def _fit_group(
         start = _named(fit)
     mean = _with_mean_over_frames(data, fit, counts, used, held="speed" in known.fixed)
     likely = np.full(len(counts), np.nan)
-    likely[judged] = np.add.reduceat(every.log_density(start), every.offsets[:-1])
+    likely[judged] = every.log_likelihood(start)
     return replace(mean, log_likelihood=likely)
 
 

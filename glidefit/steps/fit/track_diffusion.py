@@ -32,8 +32,6 @@ _SAYS_NOTHING = 0.7
 # that of one standard error from the optimum.
 _EXCLUDED = 0.5
 _IMPOSSIBLE = -1e4
-# Models whose likelihood this is.
-_MODELS = ("active", "circling")
 
 NOT_BY_LIKELIHOOD = "not fitted by likelihood"
 NO_CHAMBER = "the rotational diffusion of its chamber is not resolved"
@@ -67,7 +65,7 @@ def track_diffusions(
             for name, place in fitted.columns.items()
             if name in PARAMETERS
         }
-        if fitted.method != "likelihood" or fitted.model not in _MODELS:
+        if fitted.method != "likelihood":
             found[recording.recording] = _nothing(recording, NOT_BY_LIKELIHOOD)
         elif not (named["rotational_diffusion"] > 0 and named["localization_variance"] > 0):
             found[recording.recording] = _nothing(recording, NO_CHAMBER)
@@ -101,10 +99,7 @@ def _of_recording(
     tried = np.linspace(math.log(_LOWEST), math.log(_HIGHEST), N_TRIED)
     centre = named["rotational_diffusion"]
     likelihood = np.array(
-        [
-            data.filtered(named | {"rotational_diffusion": centre * math.exp(x)}).log_likelihood
-            for x in tried
-        ]
+        [data.log_likelihood(named | {"rotational_diffusion": centre * math.exp(x)}) for x in tried]
     )
     low, value, high, problem = _posterior(tried, likelihood)
     problem[~told] = NO_SPEED

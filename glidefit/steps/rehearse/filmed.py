@@ -58,6 +58,10 @@ def filmed_design(
 
     noise = float(np.nanmedian([0.0, *(r.localization_error_um for r in recordings)][1:]))
     speed = estimates["speed_um_s"]
+    rates = estimates["stop_rate_per_s"], estimates["go_rate_per_s"]
+    pauses = all(math.isfinite(rate) and rate > 0 for rate in rates)
+    if pauses:
+        notes.append("Filaments pause; the least scatter is that of some that do not.")
     return FilmedDesign(
         condition=condition.condition,
         slug=condition.slug,
@@ -79,6 +83,8 @@ def filmed_design(
             "rotational_diffusion_rad2_s", 0.0, "the simulated paths are straight"
         ),
         longitudinal_diffusion_um2_s=known("translational_diffusion_um2_s", 0.0, "0 is taken"),
+        stop_rate_per_s=rates[0] if pauses else 0.0,
+        go_rate_per_s=rates[1] if pauses else 0.0,
         filament_spread=min(known("speed_spread_um_s", 0.0, "0 is taken") / speed, 1.0),
         components=tuple(components),
         notes=tuple(notes),
