@@ -95,7 +95,9 @@ def _estimate(key: str, estimate: Estimate) -> EstimateRow:
     interval = shown.interval
     if math.isfinite(estimate.low) or math.isfinite(estimate.high):
         kind = "limit" if estimate.method.startswith("one-sided") else "interval"
-        interval = f"{percent(estimate.level)} {kind}: {interval}"
+        # The unit stands behind the value, if there is one.
+        unit = f" {QUANTITIES[key].unit}".rstrip() if shown.value == NONE else ""
+        interval = f"{percent(estimate.level)} {kind}: {interval}{unit}"
         if estimate.covers:
             interval += f", over {visible(estimate.covers)}"
     return EstimateRow(

@@ -166,7 +166,7 @@ def test_a_one_sided_limit_is_called_one(study):
     estimates = {**condition.estimates, "persistence_length_um": limit}
     rows = page_rows.main_estimates(dataclasses.replace(condition, estimates=estimates))
     row = next(r for r in rows if r.quantity.key == "persistence_length_um")
-    assert row.interval == "95 % limit: at least 120, over days"
+    assert row.interval == "95 % limit: at least 120 µm, over days"
     assert (row.shown.value, str(row.shown), row.method) == (
         "–",
         "at least 120",
