@@ -82,6 +82,19 @@ def test_shape_is_free_of_what_days_differ_by():
     assert scale_bounds(two, level=0.95).error > 3 * scale_bounds(one, level=0.95).error
 
 
+def test_scale_is_students_t_over_fits_of_single_days():
+    # To first order what a day says is the fit of that day alone; scatter is small here.
+    x, y, day = assay(np.random.default_rng(11), interaction=0.003, chamber=0.003)
+    alone = [
+        fit_response(x[day == d], y[day == d], np.zeros(6, dtype=int), shape=MM).fit.values["day_0"]
+        for d in range(3)
+    ]
+    found = scale_bounds(fit_response(x, y, day, shape=MM), level=0.95)
+    assert_allclose(found.value, np.mean(alone), atol=1e-4)
+    assert_allclose(found.error, np.std(alone, ddof=1) / math.sqrt(3), rtol=0.01)
+    assert_allclose(found.high - found.value, 4.302653 * found.error, rtol=1e-4)  # t, 2 df, 97.5 %
+
+
 def test_fit_is_that_of_another_program():
     x, y, _ = assay(np.random.default_rng(2), days=1)
     fit = fit_response(x, y, np.zeros(len(x), dtype=int), shape=MM)

@@ -150,10 +150,8 @@ def _q10(bounds: Bounds, fit: ResponseFit, *, level: float) -> ResponseParameter
 
 def _scale_method(fit: ResponseFit, covers: str) -> str:
     if fit.n_days > 1:
-        return (
-            f"Student’s t over {fit.n_days} days, with what the shape leaves open "
-            f"({fit.df} degrees of freedom)"
-        )
+        df = fit.n_days - 1
+        return f"Student’s t over {df + 1} days, {df} degree{'' if df == 1 else 's'} of freedom"
     reach = "over chambers of one day" if covers == "chambers" else "over days"
     return (
         f"{'profile' if fit.shape.positive else 'Student’s t'} {reach}, {fit.df} degrees of freedom"
