@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 import tifffile
-from numpy.testing import assert_allclose, assert_array_equal
+from numpy.testing import assert_allclose
 from scipy.stats import binom
 
 from glidefit.pipeline.report import report
@@ -45,7 +45,7 @@ def again(tmp_path_factory):
 def simulated(tmp_path_factory):
     """The example simulated anew."""
     out = tmp_path_factory.mktemp("simulated") / "example"
-    assert simulate(EXAMPLE / "recipe.toml", out) == 20
+    assert simulate(EXAMPLE / "recipe.toml", out) == 44
     return out
 
 
@@ -84,7 +84,7 @@ def test_pages_are_those_of_the_results(tmp_path):
     report(tmp_path)
     made, stored = files(tmp_path, "*.html"), files(REPORT, "*.html")
     assert made.keys() == stored.keys()
-    assert len(made) == 5
+    assert len(made) == 13
     for name, path in made.items():
         assert path.read_bytes() == stored[name].read_bytes(), name
 
@@ -92,7 +92,7 @@ def test_pages_are_those_of_the_results(tmp_path):
 def test_pages_and_videos_are_small():
     assert sum(p.stat().st_size for p in files(REPORT, "*.html").values()) <= 3 * MEGABYTE
     videos = files(EXAMPLE, "*.tif")
-    assert len(videos) == 2
+    assert len(videos) == 4
     assert all(p.stat().st_size <= 3 * MEGABYTE for p in videos.values())
 
 
@@ -126,7 +126,10 @@ def number(text):
 def test_video_comes_out_of_the_recipe(simulated, name):
     with tifffile.TiffFile(simulated / name) as found, tifffile.TiffFile(EXAMPLE / name) as stored:
         assert found.ome_metadata == stored.ome_metadata
-        assert_array_equal(found.asarray(), stored.asarray())
+        one, two = found.asarray(), stored.asarray()
+    assert one.shape == two.shape
+    # The rounding of another processor can move a photon number across a step.
+    assert np.mean(one != two) < 1e-3
 
 
 def test_intervals_hold_the_truth_as_often_as_they_say():

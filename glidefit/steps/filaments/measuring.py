@@ -17,7 +17,7 @@ CUT = "cut by the edge"
 HIDDEN = "hidden in a crossing"
 
 # Bodies bend so little: one over the variance of the heading per pixel of contour.
-_STIFFNESS = 400.0
+_STIFFNESS = 60.0
 # Pixels beyond an end that are looked at.
 _MARGIN = 7.0
 # So far an end may be from where it should be, in pixels and in steps.
