@@ -101,6 +101,8 @@ def filter_pausing_tracks(
     )
     if not speed > 0 or not localization_error > 0 or not min(spreads) >= 0:
         raise ValueError("speed and localization_error must be > 0, diffusion and spreads >= 0")
+    if clock not in ("per_time", "per_path"):
+        raise ValueError(f"clock must be per_time or per_path, is {clock}")
     if not stop_rate > 0 or not go_rate > 0:
         raise ValueError(f"rates must be > 0 1/s, are {stop_rate:g} and {go_rate:g}")
     _check_times(time_s, offsets, exposure_s)

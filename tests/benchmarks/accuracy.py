@@ -5,7 +5,8 @@
 Every experiment is 40 clean tracks (of 200 frames where nothing else is said), seen in every frame;
 in a field, 40 filaments are in it at a moment, and they enter and leave. Both fits take the same
 tracks; the bound is that of these tracks, knows localization error and blur, and no position or
-orientation. The times of both fits are those of this run.
+orientation. Where filaments pause, it is that of an observer who sees when they run: nobody can
+reach it. The times of both fits are those of this run.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ import argparse
 import time
 from dataclasses import dataclass
 from functools import partial
+from typing import Any
 
 import numpy as np
 
@@ -26,7 +28,8 @@ from glidefit.kernels.bound import (
 )
 from glidefit.kernels.bound_of_lengths import LENGTH_PARAMETERS, information_of_lengths
 from glidefit.kernels.gliding_data import GlidingData
-from glidefit.kernels.likelihood_fit import CIRCLING, STRAIGHT, fit_likelihood
+from glidefit.kernels.likelihood_fit import CIRCLING, PAUSING, STRAIGHT, fit_likelihood
+from glidefit.kernels.pausing_guess import pausing_guess
 from glidefit.steps.simulate import (
     Scenario,
     ScenarioCondition,
@@ -56,6 +59,8 @@ class Case:
     turning_rate_sd: float = 0.0
     speed_spread: float = 0.0  # relative
     sideways_diffusion: float = 0.0
+    stop_rate: float = 0.0
+    go_rate: float = 0.0
     field_um: float = 0.0  # side of the field; 0 sees everything
     free: tuple[str, ...] = STRAIGHT
 
@@ -66,6 +71,16 @@ _ACTIN = {
     "longitudinal_diffusion": 0.05,
     "frame_s": 0.1,
     "localization_error": 0.04,
+}
+_PAUSING: dict[str, Any] = {
+    "speed": 3.0,
+    "rotational_diffusion": 0.3,
+    "longitudinal_diffusion": 0.05,
+    "frame_s": 1 / 15,
+    "localization_error": 0.04,
+    "stop_rate": 0.5,
+    "go_rate": 2.0,
+    "free": PAUSING,
 }
 _TURNING = (*STRAIGHT, "turning_rate")
 _SIDEWAYS = (*STRAIGHT, "sideways_diffusion")
@@ -88,6 +103,10 @@ CASES = {
     "actin, error of half a step": Case(**_ACTIN | {"localization_error": 0.2}),
     "kinesin, sideways diffusion": Case(sideways_diffusion=0.01, free=_SIDEWAYS),
     "actin, sideways diffusion": Case(**_ACTIN, sideways_diffusion=0.01, free=_SIDEWAYS),
+    "pausing": Case(**_PAUSING),
+    "pausing, all exposed": Case(**_PAUSING, exposure_s=1 / 15),
+    "kinesin, pausing": Case(stop_rate=0.1, go_rate=0.4, free=PAUSING),
+    "pausing, 80 µm field": Case(**_PAUSING, field_um=80.0),
     "kinesin, 80 µm field": Case(field_um=80.0),
     "actin, 80 µm field": Case(**_ACTIN, field_um=80.0),
 }
@@ -101,6 +120,8 @@ def simulated(case: Case, rng: np.random.Generator) -> Tracks:
         longitudinal_diffusion_um2_s=case.longitudinal_diffusion,
         turning_rate_rad_s=case.turning_rate,
         turning_rate_sd_rad_s=case.turning_rate_sd,
+        stop_rate_per_s=case.stop_rate,
+        start_rate_per_s=case.go_rate,
     )
     if case.field_um > 0:
         return in_field(case, condition, rng)
@@ -171,8 +192,12 @@ def by_likelihood(tracks: Tracks, case: Case) -> dict[str, float]:
         offsets=tracks.offsets,
         exposure_s=case.exposure_s,
     )
-    fit = fit_likelihood(data, free=case.free)
+    fit = fit_likelihood(data, free=case.free, start=pausing_guess(data) if pauses(case) else None)
     return dict(zip(fit.names, map(float, fit.values), strict=True))
+
+
+def pauses(case: Case) -> bool:
+    return case.stop_rate > 0
 
 
 def by_msd(tracks: Tracks, case: Case) -> dict[str, float]:
@@ -210,6 +235,8 @@ def information(case: Case, tracks: Tracks) -> np.ndarray:
         "speed_spread": case.speed_spread * case.speed,
         "exposure_s": case.exposure_s,
     }
+    if pauses(case):
+        return running_information(case, tracks, motion)
     if case.field_um > 0:
         whole = np.zeros((len(BOUND_PARAMETERS),) * 2)
         p = len(LENGTH_PARAMETERS)
@@ -221,6 +248,46 @@ def information(case: Case, tracks: Tracks) -> np.ndarray:
         sideways_diffusion=case.sideways_diffusion,
         **motion,
     )
+
+
+def running_information(case: Case, tracks: Tracks, motion: dict[str, Any]) -> np.ndarray:
+    """Of an observer who knows how long each filament has run at each frame.
+
+    Positions are those of a filament that never pauses, seen at those times; in a pause the same
+    place is seen again. Exposures are left out of it, and clocks are drawn anew: the mean over
+    200 of them stands for all tracks of the same length.
+    """
+    rng = np.random.default_rng(1)
+    lengths = np.full(N_TRACKS, case.n_frames)
+    if case.field_um > 0:
+        lengths = tracks.n_positions
+    whole = np.zeros((len(BOUND_PARAMETERS),) * 2)
+    for n in rng.choice(lengths, 200):
+        clock = running_time(np.arange(n) * case.frame_s, case, rng)
+        if len(np.unique(clock)) > 3:  # who hardly runs says nothing
+            whole += track_information(clock, **motion | {"exposure_s": 0.0})
+    return whole * len(lengths) / 200
+
+
+def running_time(time_s: np.ndarray, case: Case, rng: np.random.Generator) -> np.ndarray:
+    """Time that a filament has run at each of some times."""
+    run = [rng.random() < case.go_rate / (case.stop_rate + case.go_rate)]
+    times, ran = [0.0], [0.0]
+    while times[-1] < time_s[-1]:
+        wait = rng.exponential(1 / (case.stop_rate if run[-1] else case.go_rate))
+        ran.append(ran[-1] + wait * run[-1])
+        times.append(times[-1] + wait)
+        run.append(not run[-1])
+    return np.interp(time_s, times, ran)
+
+
+def rate_bounds(case: Case, tracks: Tracks) -> dict[str, float]:
+    """Of an observer who sees every switch: 1/√(switches of a kind)."""
+    if not pauses(case):
+        return {}
+    going = case.go_rate / (case.stop_rate + case.go_rate)
+    seen_s = float((tracks.n_positions - 1).sum()) * case.frame_s
+    return dict.fromkeys(("stop_rate", "go_rate"), (case.stop_rate * going * seen_s) ** -0.5)
 
 
 def bounds(case: Case, known: np.ndarray) -> dict[str, float]:
@@ -249,7 +316,7 @@ def deviation(values: dict[str, float], name: str, case: Case) -> float:
     if name == "v/D_r":
         truth = case.speed / case.rotational_diffusion
         return values["speed"] / values["rotational_diffusion"] / truth - 1
-    return values[name] / getattr(case, name) - 1
+    return values.get(name, np.nan) / getattr(case, name) - 1
 
 
 def run(case: Case, *, n_experiments: int, seed: int) -> None:
@@ -260,7 +327,7 @@ def run(case: Case, *, n_experiments: int, seed: int) -> None:
     for rng in np.random.default_rng(seed).spawn(n_experiments):
         tracks = simulated(case, rng)
         if alike is None or case.field_um > 0:
-            alike = bounds(case, information(case, tracks))
+            alike = bounds(case, information(case, tracks)) | rate_bounds(case, tracks)
         for name, least in alike.items():
             squares.setdefault(name, []).append(least**2)
         for method, fit in (("likelihood", by_likelihood), ("MSD", by_msd)):
