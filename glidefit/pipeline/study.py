@@ -79,6 +79,7 @@ def study(
         settings=settings.values,
         seed=seed,
     )
+    films = {r.recording for r in recording_results if (r.kind, r.shape) == ("video", "filament")}
     results = [
         _condition(
             condition,
@@ -88,6 +89,7 @@ def study(
             numbers.get(condition),
             preparations[condition],
             settings,
+            from_contours=any(r.recording in films for r in by_condition[condition]),
         )
         for condition, control, slug in conditions
     ]
@@ -257,6 +259,8 @@ def _condition(
     numbers: ConditionNumbers | None,
     preparations: list[str],
     sourced: SourcedSettings,
+    *,
+    from_contours: bool,
 ) -> ConditionResult:
     from glidefit.steps import ageing, fit, motility, summarise, uncertainty
 
@@ -314,6 +318,7 @@ def _condition(
         checks=checks,
         model=fitted.model,
         left_out=fitted.left_out,
+        from_contours=from_contours,
         heading_sd=_heading_sd(recordings, combined, fitted.columns),
         kept=counted.tracks_kept,
     )

@@ -69,7 +69,8 @@ def test_every_kind_of_value(tmp_path):
 
 def test_recipe_of_the_example_shows_parts_with_and_without_video():
     parts = read_recipe(Path(__file__).parents[2] / "example_tracks/recipe.toml")
-    assert [part.video is None for part in parts] == [True, False]
+    assert [part.video is None for part in parts] == [True, True, True, True, False]
+    assert [part.filament_video is None for part in parts] == [True, True, True, False, True]
 
 
 @pytest.mark.parametrize("text", ["part = 3", "part = []", "part = [3]", "[[part]]\nvideo = 3"])

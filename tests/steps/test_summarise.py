@@ -36,14 +36,14 @@ def recordings(scenario=SCENARIO, *, seed=1):
     return [cleaned(r, scenario, settings=SETTINGS.values) for r in assay.recordings]
 
 
-def analysed(them, *, preparations=None):
+def analysed(them, *, preparations=None, settings=SETTINGS):
     return study(
         name="s",
         conditions=[("c", False, "c")],
         recordings=them,
         recording_results=[],
         preparations={"c": preparations or []},
-        settings=SETTINGS,
+        settings=settings,
         seed=1,
         sheet_sha256="",
     ).conditions[0]
@@ -130,7 +130,7 @@ def one_sided_curve(factor):
     )
 
 
-def told(factor=1.0, *, heading=0.008, undecided=0, heading_sd=0.0):
+def told(factor=1.0, *, heading=0.008, undecided=0, heading_sd=0.0, from_contours=False):
     """Problems of a condition whose D_r is 0.008 from the MSD in each of three days."""
     draws = np.tile([0.008, heading], (10, 1)) + np.linspace(-1e-5, 1e-5, 10)[:, None] * [1, -1]
     combined = Combined(
@@ -149,7 +149,13 @@ def told(factor=1.0, *, heading=0.008, undecided=0, heading_sd=0.0):
         fit_problems=[],
         undecided=undecided,
         heading_sd=heading_sd,
+        from_contours=from_contours,
     )
+
+
+def test_contours_smooth_the_path_and_the_page_says_so():
+    (found,) = told(1.0, from_contours=True)
+    assert found.startswith("D_r was read from contours of filaments in a video")
 
 
 def test_a_heading_that_is_hardly_known_is_a_problem():
@@ -271,7 +277,7 @@ def test_missing_estimates_are_filled_with_reasons():
     known = {"speed_um_s": Estimate(value=1.0)}
     every = summarise.all_estimates(known, level=0.95)
     assert every["speed_um_s"].value == 1.0
-    assert every["running_fraction"].problem == "not fitted: the active model knows no pauses"
+    assert every["turning_rate_rad_s"].problem.startswith("not fitted: no steady turning")
     assert every["rotational_diffusion_rad2_s"].problem == "no track was left to fit"
 
 
@@ -364,7 +370,8 @@ def test_pauses_fail_the_checks_of_the_active_model():
         days=2,
         chambers_per_day=1,
     )
-    problems = analysed(recordings(scenario)).problems
+    forced = resolve(options={"fit.model": "active"})
+    problems = analysed(recordings(scenario), settings=forced).problems
     assert any(text.startswith("The active model does not describe") for text in problems), problems
 
 
