@@ -36,14 +36,14 @@ def recordings(scenario=SCENARIO, *, seed=1):
     return [cleaned(r, scenario, settings=SETTINGS.values) for r in assay.recordings]
 
 
-def analysed(them, *, preparations=None):
+def analysed(them, *, preparations=None, settings=SETTINGS):
     return study(
         name="s",
         conditions=[("c", False, "c")],
         recordings=them,
         recording_results=[],
         preparations={"c": preparations or []},
-        settings=SETTINGS,
+        settings=settings,
         seed=1,
         sheet_sha256="",
     ).conditions[0]
@@ -271,7 +271,7 @@ def test_missing_estimates_are_filled_with_reasons():
     known = {"speed_um_s": Estimate(value=1.0)}
     every = summarise.all_estimates(known, level=0.95)
     assert every["speed_um_s"].value == 1.0
-    assert every["running_fraction"].problem == "not fitted: the active model knows no pauses"
+    assert every["stop_rate_per_s"].problem.startswith("not fitted: no pauses of a size")
     assert every["rotational_diffusion_rad2_s"].problem == "no track was left to fit"
 
 
@@ -364,8 +364,15 @@ def test_pauses_fail_the_checks_of_the_active_model():
         days=2,
         chambers_per_day=1,
     )
-    problems = analysed(recordings(scenario)).problems
+    them = recordings(scenario)
+    problems = analysed(them, settings=resolve(options={"fit.model": "active"})).problems
     assert any(text.startswith("The active model does not describe") for text in problems), problems
+    chosen = analysed(them)
+    assert chosen.model == "pausing"
+    assert not any("does not describe" in text for text in chosen.problems), chosen.problems
+    assert "Filaments pause at random" in chosen.methods
+    assert chosen.estimates["stop_rate_per_s"].low < chosen.estimates["stop_rate_per_s"].high
+    assert [one.model for one in chosen.model_evidence].count("pausing") == 3
 
 
 def test_too_few_innovations_say_nothing():

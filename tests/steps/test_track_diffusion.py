@@ -109,9 +109,9 @@ def test_short_tracks_say_less_or_nothing_and_why():
 
 def test_one_recording_is_filtered_21_times(monkeypatch):
     _, _, made = found(SHORT, seed=2)
-    counted, filtered = [], GlidingData.filtered
+    counted, filtered = [], GlidingData.log_likelihood
     monkeypatch.setattr(
-        GlidingData, "filtered", lambda data, v: counted.append(1) or filtered(data, v)
+        GlidingData, "log_likelihood", lambda data, v: counted.append(1) or filtered(data, v)
     )
     track_diffusions(made.recordings[:1], made.numbers["c"].fitted)
     assert len(counted) == 21

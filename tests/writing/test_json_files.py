@@ -27,7 +27,7 @@ def test_results_are_strict_json_with_null_for_nan_and_format_first(study):
     data = json.loads(text, parse_constant=refuse)
     assert next(iter(data)) == "format"
     assert data["format"] == FORMAT
-    assert data["conditions"][0]["estimates"]["running_fraction"]["value"] is None
+    assert data["conditions"][0]["estimates"]["go_rate_per_s"]["value"] is None
     assert text.endswith("}\n")
     assert "µm" not in json.dumps("µm")  # what ensure_ascii would have made of it
     assert "× noise" in text
