@@ -10,6 +10,8 @@ from numpy.testing import assert_allclose
 from glidefit.designs import WITH_COMPONENTS, ChamberOutcome, Outcome
 from glidefit.evidence import ChamberEvidence
 from glidefit.kernels.bound import least_standard_errors, track_information
+from glidefit.pipeline.rehearse import _scenario
+from glidefit.results import Estimate
 from glidefit.steps.rehearse import (
     REHEARSED,
     SimulatedChamber,
@@ -79,6 +81,17 @@ def test_what_is_not_resolved_is_replaced_and_said(wild):
     assert found.localization_error_um == np.median([r.localization_error_um for r in own])
     assert len(found.notes) == 3
     assert math.isnan(found.truth["persistence_length_um"])
+
+
+def test_pauses_are_simulated_where_they_were_fitted(wild):
+    condition, recordings = wild
+    assert design_of(condition, recordings).stop_rate_per_s == 0
+    rates = {"stop_rate_per_s": Estimate(value=0.5), "go_rate_per_s": Estimate(value=2.0)}
+    design = design_of(condition, recordings, estimates=condition.estimates | rates)
+    assert (design.stop_rate_per_s, design.go_rate_per_s) == (0.5, 2.0)
+    assert any("pause" in note for note in design.notes)
+    (simulated,) = _scenario(design).conditions
+    assert simulated.running_fraction == 0.8
 
 
 def test_recordings_that_differ_are_said(wild):

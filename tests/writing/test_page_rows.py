@@ -172,3 +172,15 @@ def test_a_one_sided_limit_is_called_one(study):
         "at least 120",
         "One-sided limit: Student's t.",
     )
+
+
+def test_evidence_says_what_it_speaks_for(study):
+    (row,) = page_rows.evidence_rows(study.conditions[0].model_evidence)
+    assert (row.model, row.value, row.needed, row.speaks) == (
+        "pausing",
+        "0.0152",
+        "above 0.02",
+        "against",
+    )
+    unknown = dataclasses.replace(study.conditions[0].model_evidence[0], value=math.nan)
+    assert page_rows.evidence_rows([unknown])[0].value == "–"
