@@ -159,6 +159,14 @@ _ALL = (
         meaning="What the localization error has more along the heading than across it.",
     ),
     Quantity(
+        key="diffusion_um2_s",
+        symbol="D",
+        unit="µm²/s",
+        label="free diffusion",
+        formula="MSD = 4 D t",
+        meaning="Diffusion of filaments that nothing drives, mean of all directions.",
+    ),
+    Quantity(
         key="frame_speed_um_s",
         symbol="",
         unit="µm/s",

@@ -111,11 +111,11 @@ class FitSettings(_Section):
         "",
         "What the numbers come from; the mean squared displacement stands beside the likelihood.",
     )
-    model: Literal["auto", "active", "circling", "pausing"] = setting(
+    model: Literal["auto", "active", "circling", "pausing", "passive"] = setting(
         "auto",
         "",
-        "Whether paths turn steadily or filaments pause; chosen by practical size and at the level "
-        "of chambers.",
+        "Whether paths turn steadily, filaments pause, or nothing drives them; chosen by practical "
+        "size and at the level of chambers.",
     )
     clock: Literal["per_path", "per_time"] = setting(
         "per_path",

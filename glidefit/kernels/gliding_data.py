@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from glidefit.kernels.likelihood import Clock, FilteredTracks, filter_tracks
+from glidefit.kernels.passive import diffusing_log_density
 from glidefit.kernels.pausing import filter_pausing_tracks
 
 Floats = NDArray[np.float64]
@@ -27,6 +28,7 @@ PARAMETERS = (
     "error_variance_along",
     "stop_rate",
     "go_rate",
+    "diffusion",
 )
 
 
@@ -45,7 +47,7 @@ class GlidingData:
     def filtered(self, values: Mapping[str, float]) -> FilteredTracks:
         """The tracks under parameters named as in `PARAMETERS`; those left out are 0.
 
-        They pause if there is a stop rate.
+        They pause if there is a stop rate, and have no propulsion if there is a diffusion.
         """
         return self._filtered(values, innovations=True)
 
@@ -58,6 +60,8 @@ class GlidingData:
         return np.add.reduceat(self.log_density(values), self.offsets[:-1])
 
     def _filtered(self, values: Mapping[str, float], *, innovations: bool) -> FilteredTracks:
+        if "diffusion" in values:
+            return self._diffusing(values)
         pauses: dict[str, Any] = {}
         if "stop_rate" in values:
             pauses = {name: values[name] for name in ("stop_rate", "go_rate")}
@@ -80,6 +84,29 @@ class GlidingData:
             exposure_s=self.exposure_s,
             clock=self.clock,
             relative_error=self.relative_error,
+        )
+
+    def _diffusing(self, values: Mapping[str, float]) -> FilteredTracks:
+        error = np.full(len(self.x), values["localization_variance"])
+        if self.relative_error is not None:
+            error *= self.relative_error**2
+        innovation = np.empty((len(self.x), 2))
+        columns = self.time_s, self.x, self.y, self.offsets
+        density = diffusing_log_density(
+            *columns, error, values["diffusion"], self.exposure_s, innovation
+        )
+        density[~np.isfinite(density)] = -np.inf
+        m = len(self.offsets) - 1
+        none = np.full(m, np.nan)
+        return FilteredTracks(
+            log_likelihood=np.add.reduceat(density, self.offsets[:-1]) if m else np.empty(0),
+            log_density=density,
+            innovation=innovation,
+            heading_sd=none,
+            speed_mean=none,
+            speed_sd=none,
+            turning_rate_mean=none,
+            turning_rate_sd=none,
         )
 
     def some(self, n_positions: int) -> GlidingData:
@@ -132,4 +159,5 @@ def first_guess(data: GlidingData) -> dict[str, float]:
         "error_variance_along": 0.2 * noise,
         "stop_rate": 0.1 / wait,
         "go_rate": 0.3 / wait,
+        "diffusion": square / wait / 4,
     }

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 __all__ = [
     "CIRCLING",
     "PARAMETERS",
+    "PASSIVE",
     "PAUSING",
     "STRAIGHT",
     "GlidingData",
@@ -33,6 +34,7 @@ STRAIGHT = PARAMETERS[:5]
 CIRCLING = PARAMETERS[:7]
 _SIGNED = ("turning_rate",)
 PAUSING = (*STRAIGHT, "stop_rate", "go_rate")
+PASSIVE = ("diffusion", "localization_variance")
 _NEVER_ZERO = ("speed", "localization_variance", "stop_rate", "go_rate")
 
 # The climb ends when the next step promises less than this of the logarithm of the likelihood:

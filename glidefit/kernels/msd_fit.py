@@ -27,6 +27,8 @@ MIN_LAGS = 5  # four parameters and one to spare
 _FLOOR = 1e-3
 # D_r t beyond which the series of the model loses its meaning for a negative D_r.
 _MOST_NEGATIVE_BEND = -3.0
+# Deviation on the logarithmic scale there: finite, since slopes are taken across the edge.
+_FORBIDDEN = 1e3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -152,7 +154,7 @@ def fit_msd(curves: Sequence[LagCurve], *, start: Mapping[str, float] | None = N
 
     def residual(values: Mapping[str, float]) -> Floats:
         if values["rotational_diffusion"] * max(c.lag_s[-1] for c in curves) < _MOST_NEGATIVE_BEND:
-            return np.full(points, np.inf)
+            return np.full(points, _FORBIDDEN)
         return np.concatenate(
             [
                 np.log(np.maximum(model_values(c, values), _FLOOR * c.value)) - log
@@ -160,7 +162,9 @@ def fit_msd(curves: Sequence[LagCurve], *, start: Mapping[str, float] | None = N
             ]
         )
 
-    fit = fit_least_squares(residual, start or _first_guess(curves[0]))
+    if start is None or np.all(residual(start) == _FORBIDDEN):
+        start = _first_guess(curves[0])
+    fit = fit_least_squares(residual, start)
     if fit.problem:
         return _failed(n_tracks, fit.problem)
     influence = np.zeros((n_tracks, len(PARAMETERS)))

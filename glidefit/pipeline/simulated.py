@@ -10,6 +10,7 @@ from glidefit.evidence import CleanRecording
 from glidefit.pipeline.study import ConditionNumbers, condition_numbers, with_borrowed
 from glidefit.settings import Settings
 from glidefit.steps.clean import clean
+from glidefit.steps.fit import with_floating
 from glidefit.steps.simulate import Scenario, SimulatedAssay, SimulatedRecording, simulate_assay
 
 
@@ -61,6 +62,9 @@ def analysed(scenario: Scenario, *, settings: Settings, rng: np.random.Generator
     by_condition = {
         condition.name: [r for r in recordings if r.condition == condition.name]
         for condition in scenario.conditions
+    }
+    by_condition = {
+        name: with_floating(own, settings=settings.fit) for name, own in by_condition.items()
     }
     numbers = {
         name: condition_numbers(own, settings=settings, rng=rng)

@@ -21,7 +21,14 @@ from glidefit.evidence import (
     Combined,
 )
 from glidefit.pipeline.side_by_side import side_by_side
-from glidefit.results import ConditionResult, Estimate, RecordingResult, SettingRow, StudyResult
+from glidefit.results import (
+    ConditionResult,
+    Estimate,
+    RecordingResult,
+    SettingRow,
+    StudyResult,
+    TimePoint,
+)
 from glidefit.settings import Settings, SourcedSettings, declarations
 
 if TYPE_CHECKING:
@@ -64,6 +71,7 @@ def study(
         If that is true of all conditions.
     """
     from glidefit.steps.fields import same_fields
+    from glidefit.steps.fit import with_floating
 
     by_condition = {
         # The order of rows in a sheet means nothing, so it must not change which draws a day gets.
@@ -72,6 +80,10 @@ def study(
             key=lambda r: (r.day, r.chamber, r.recording),
         )
         for condition, _, _ in conditions
+    }
+    by_condition = {
+        condition: with_floating(own, settings=settings.values.fit)
+        for condition, own in by_condition.items()
     }
     numbers = _all_numbers(
         by_condition,
@@ -142,7 +154,7 @@ def condition_numbers(
     from glidefit.steps import fit, motility, summarise, uncertainty
 
     fitted = fit.fit(recordings, settings=settings.fit)
-    gliding = motility.motility(recordings)
+    gliding = motility.motility(recordings, passive=fitted.model == "passive")
     interval = settings.interval
     combined = uncertainty.combine(
         fitted.chambers, settings=interval, rng=rng, n_scalars=len(fitted.columns)
@@ -200,6 +212,10 @@ def _estimates(numbers: ConditionNumbers, *, settings: Settings) -> dict[str, Es
         known |= uncertainty.estimates(
             combined, columns, settings=settings.interval, borrowed=numbers.borrowed
         )
+    speed = known.pop(uncertainty.SPEED_OF_PASSIVE)
+    if numbers.fitted.model == "passive":
+        return summarise.passive(known, speed)
+    del known["diffusion_um2_s"]
     if "circling" not in numbers.fitted.model:
         del known["turning_rate_rad_s"]
     if "pausing" not in numbers.fitted.model:
@@ -290,9 +306,11 @@ def _condition(
         )
         for c in fitted.curves
     )
-    points = motility.time_course(
-        recordings, longest_lag_s=fitted.longest_lag_s, pooled=fitted.pooled
-    )
+    points: tuple[TimePoint, ...] = ()
+    if fitted.model != "passive":
+        points = motility.time_course(
+            recordings, longest_lag_s=fitted.longest_lag_s, pooled=fitted.pooled
+        )
     counted = summarise.counts(recordings)
     covers = summarise.generalises(condition, combined, preparations, numbers.borrowed)
     estimates = summarise.all_estimates(numbers.estimates, level=level)

@@ -19,13 +19,16 @@ COLUMNS = {"motile_fraction": 0, "ever_moved_fraction": 1}
 _STRETCHES, _FEWEST_FRAMES = 6, 10
 
 
-def motility(recordings: Sequence[CleanRecording]) -> tuple[ChamberEvidence, ...]:
+def motility(
+    recordings: Sequence[CleanRecording], *, passive: bool = False
+) -> tuple[ChamberEvidence, ...]:
     """Motile fraction and share that ever moved, by chamber, over all tracks seen.
 
     Motile fraction = filament-frames gliding / filament-frames seen: the chance that a filament
     present at a moment glides. Counting tracks instead favours fast filaments, which enter the
     field more often and leave it sooner. Tracks that cannot be judged (under three positions, too
-    short to tell gliding from rest, a jump) count on neither side.
+    short to tell gliding from rest, a jump) count on neither side. Where filaments are passive,
+    none glides.
 
     Returns
     -------
@@ -35,17 +38,19 @@ def motility(recordings: Sequence[CleanRecording]) -> tuple[ChamberEvidence, ...
     chambers: dict[tuple[str, str], list[CleanRecording]] = {}
     for recording in recordings:
         chambers.setdefault((recording.day, recording.chamber), []).append(recording)
-    return tuple(_chamber(day, chamber, them) for (day, chamber), them in chambers.items())
+    return tuple(_chamber(*key, them, passive) for key, them in chambers.items())
 
 
-def _chamber(day: str, chamber: str, recordings: list[CleanRecording]) -> ChamberEvidence:
+def _chamber(
+    day: str, chamber: str, recordings: list[CleanRecording], passive: bool
+) -> ChamberEvidence:
     fields = list(dict.fromkeys(r.field or r.recording for r in recordings))
     owner, rows = [], []
     for one in recordings:
         clean = one.clean
         judged = clean.decided & ~np.isin(clean.reason, (JUMP, SHORT, UNCLEAR))
         frames = clean.tracks.n_positions.astype(np.float64)
-        gliding = judged & (clean.reason == KEPT)
+        gliding = judged & (clean.reason == KEPT) & (not passive)
         moved = judged & (clean.reason != STUCK)
         rows.append(np.stack([frames * gliding, frames * judged, moved, judged], axis=1))
         owner.append(np.full(clean.tracks.n_tracks, fields.index(one.field or one.recording)))

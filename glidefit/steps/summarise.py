@@ -38,6 +38,7 @@ _VAGUE_HEADING = 0.25
 _NOT_IN_MODEL = {
     "stop_rate_per_s": _NO_PAUSES,
     "go_rate_per_s": _NO_PAUSES,
+    "diffusion_um2_s": "not fitted: the filaments are driven",
     "turning_rate_rad_s": "not fitted: no steady turning of a size that matters was seen",
     "sideways_diffusion_um2_s": "not fitted: a filament follows its path; a setting frees it",
     "further_error_along_um": "not fitted: taken as equal in all directions; a setting frees it",
@@ -75,6 +76,27 @@ def all_estimates(known: Mapping[str, Estimate], *, level: float) -> dict[str, E
     missing = {key: Estimate(level=level, problem=why) for key, why in _NOT_IN_MODEL.items()}
     nothing = Estimate(level=level, problem="no track was left to fit")
     return {key: known.get(key) or missing.get(key) or nothing for key in QUANTITIES}
+
+
+_PASSIVE = (
+    "localization_error_um",
+    "diffusion_um2_s",
+    "frame_speed_um_s",
+    "motile_fraction",
+    "ever_moved_fraction",
+    "smallest_speed_um_s",
+)
+
+
+def passive(known: Mapping[str, Estimate], speed: Estimate) -> dict[str, Estimate]:
+    """Estimates of filaments that nothing drives; the rest says that there is no propulsion."""
+    no = Estimate(level=speed.level, problem="not fitted: the tracks show no directed motion")
+    kept = {key: known[key] for key in _PASSIVE if key in known}
+    return (
+        {key: no for key in QUANTITIES if key != "smallest_speed_um_s"}
+        | kept
+        | {"speed_um_s": speed}
+    )
 
 
 def without_pauses(known: Mapping[str, Estimate], *, level: float) -> dict[str, Estimate]:
@@ -493,6 +515,8 @@ def _headings_disagree(
 
 
 _ALSO = {
+    "passive": "The tracks show no directed motion: free diffusion was fitted to their "
+    "displacements by maximum likelihood. ",
     "circling": "Each filament has a turning rate of its own. ",
     "pausing": "Filaments pause at random with their heading frozen and run on, both at fitted "
     "rates; v and D_r are those while running. ",

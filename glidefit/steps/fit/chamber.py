@@ -21,6 +21,7 @@ from glidefit.steps.fit.evidence_columns import COLUMN, CurveColumns
 from glidefit.steps.fit.intervals import Interval, Kept
 from glidefit.steps.fit.likelihood import ChamberLikelihood, fit_chamber_likelihood
 from glidefit.steps.fit.model_choice import Turning
+from glidefit.steps.fit.propulsion import FLOATING, fit_floating
 from glidefit.steps.fit.track_speeds import frame_speed, lasting_variance, track_speed
 
 Floats = NDArray[np.float64]
@@ -28,6 +29,7 @@ Floats = NDArray[np.float64]
 # Parameters that the likelihood has and the MSD has too, in this order, then the variance of speed.
 _MAIN = [COLUMN[name] for name in STRAIGHT]
 _CIRCLING = [COLUMN[name] for name in CIRCLING_NAMES[len(STRAIGHT) :]]
+_FLOATING = [COLUMN[name] for name in FLOATING]
 _PAUSING = [COLUMN[name] for name in PAUSING_NAMES[len(STRAIGHT) :]]
 
 
@@ -67,10 +69,11 @@ def fit_chamber(
     method: str,
     turning: Turning,
     pauses: bool,
+    passive: bool,
     known: FitParameters,
     clock: Clock,
 ) -> ChamberFit:
-    """Fit one chamber, with a turning rate if the paths turn, with pauses if told so."""
+    """Fit one chamber: with a turning rate if the paths turn, with pauses, or as passive."""
     parts = [(c, i, i.of(members)) for c, i in zip(columns, intervals, strict=True)]
     parts = [(c, i, places) for c, i, places in parts if places]
     # Rows of the evidence follow the curves, interval by interval.
@@ -85,13 +88,19 @@ def fit_chamber(
     for i, name in enumerate(("msd_speed", "msd_rotational_diffusion")):
         _set(values, influence, name, (from_msd.values[i], from_msd.influence[:, i]))
     own, left_out, problem = None, 0, from_msd.problem
-    if method == "likelihood":
+    if passive:
+        own = fit_floating(ordered)
+        values[_MAIN], influence[:, _MAIN] = np.nan, 0.0
+        values[_FLOATING], influence[:, _FLOATING] = own.values, own.influence
+        problem = own.problem
+    elif method == "likelihood":
         names = _names(turning, pauses, known)
         start = _likely_start(from_msd, pooled, lasting[0], turning, pauses)
         own = fit_chamber_likelihood(ordered, names=names, start=start, known=known, clock=clock)
         there = [COLUMN[name] for name in names]
         values[there], influence[:, there] = own.values, own.influence
         problem = own.problem
+    if own is not None:
         left_out = 0 if problem else int((~own.used & (_counts(ordered) >= 2)).sum())
     _set(values, influence, "frame_speed", _mean_frame_speed(ordered))
     row = 0
@@ -212,6 +221,12 @@ def _fill_msd(
     """Measured MSD, and that of the fitted parameters."""
     values[columns.msd] = curve.value
     influence[rows, columns.msd] = np.nan_to_num(curve.influence * curve.value)
+    if np.isfinite(values[COLUMN["diffusion"]]):
+        free = 4 * (curve.lag_s - curve.exposure_s / 3)
+        slopes = np.stack([free, np.full_like(free, 4.0)])
+        values[columns.model] = values[_FLOATING[:2]] @ slopes
+        influence[:, columns.model] = influence[:, _FLOATING[:2]] @ slopes
+        return
     names = _MAIN + [place for place in (*_CIRCLING, *_PAUSING) if np.isfinite(values[place])]
     fitted = values[names]
     if not np.all(np.isfinite(fitted)):

@@ -25,6 +25,7 @@ from glidefit.steps.fit.model_choice import (
     compare_pauses,
     look_for_turning,
 )
+from glidefit.steps.fit.propulsion import PASSIVE, Propulsion, look_for_propulsion
 
 Floats = NDArray[np.float64]
 
@@ -58,7 +59,7 @@ class ConditionFit:
     pooled : (4,) array
         Parameters of all tracks in one pot, for reading speeds off single lags.
     model : str
-        "active", "circling", "pausing" or "circling and pausing".
+        "active", "circling", "pausing", "circling and pausing" or "passive".
     turning : Turning
     evidence : tuple of ModelEvidence
         From which the model was chosen.
@@ -111,6 +112,7 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
                 method=settings.method,
                 turning=turning,
                 pauses=pauses,
+                passive=propulsion.none,
                 known=known,
                 clock=settings.clock,
             )
@@ -118,7 +120,11 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         ]
 
     known = _known(settings, kept)
-    results, pauses = _with_or_without_pauses(fitted, settings)
+    propulsion = look_for_propulsion(members, settings)
+    if propulsion.none:
+        results, pauses = fitted(False), Pauses(promise=-np.inf, forced=PASSIVE)
+    else:
+        results, pauses = _with_or_without_pauses(fitted, settings)
     variance = _speed_variance([result.evidence for result in results])
     corrected = ["msd_speed"] if settings.method == "likelihood" else ["msd_speed", "speed"]
     speeds: dict[str, tuple[Floats, Floats]] = {}
@@ -135,9 +141,9 @@ def fit(recordings: Sequence[CleanRecording], *, settings: FitSettings) -> Condi
         known=known,
         longest_lag_s=longest,
         pooled=pooled.values,
-        model=_model(turning, pauses),
+        model=_model(propulsion, turning, pauses),
         turning=turning,
-        evidence=() if settings.method == "msd" else (*turning.evidence, *pauses.evidence),
+        evidence=_evidence(propulsion, turning, pauses, settings),
         problems=tuple(result.problem for result in results if result.problem),
     )
 
@@ -183,8 +189,21 @@ def _with_or_without_pauses(
     return (results if pauses.seen else without), pauses
 
 
-def _model(turning: Turning, pauses: Pauses) -> str:
+def _evidence(
+    propulsion: Propulsion, turning: Turning, pauses: Pauses, settings: FitSettings
+) -> tuple[ModelEvidence, ...]:
+    """What the model was chosen from: where there is no propulsion, there is no more to ask."""
+    if settings.method == "msd":
+        return ()
+    if propulsion.none:
+        return propulsion.evidence
+    return (*propulsion.evidence, *turning.evidence, *pauses.evidence)
+
+
+def _model(propulsion: Propulsion, turning: Turning, pauses: Pauses) -> str:
     """In words."""
+    if propulsion.none:
+        return PASSIVE
     if not pauses.seen:
         return turning.model
     return f"{CIRCLING} and {PAUSING}" if turning.steady else PAUSING

@@ -27,6 +27,8 @@ SCALARS = (
     "error_variance_along",
     "stop_rate",  # of pausing filaments
     "go_rate",
+    "diffusion",  # without propulsion
+    "squared_speed",
 )
 COLUMN = {name: i for i, name in enumerate(SCALARS)}
 

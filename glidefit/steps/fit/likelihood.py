@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -99,14 +99,18 @@ def fit_chamber_likelihood(
     clock : {"per_path", "per_time"}
         What the heading diffuses with.
     """
+    return by_interval(members, lambda group: _fit_group(group, names, start, known, clock))
+
+
+def by_interval(
+    members: Sequence[Kept], fit: Callable[[Sequence[Kept]], ChamberLikelihood]
+) -> ChamberLikelihood:
+    """Fit recordings of each frame interval by themselves, and average by positions."""
     groups: dict[tuple[float, float], list[int]] = {}
     for i, one in enumerate(members):
         key = (round(one.source.frame_s, 6), round(one.source.exposure_s, 6))
         groups.setdefault(key, []).append(i)
-    parts = {
-        tuple(places): _fit_group([members[i] for i in places], names, start, known, clock)
-        for places in groups.values()
-    }
+    parts = {tuple(places): fit([members[i] for i in places]) for places in groups.values()}
     if len(parts) == 1:
         return next(iter(parts.values()))
     return _averaged(members, parts)
@@ -152,7 +156,7 @@ def _fit_group(
 ) -> ChamberLikelihood:
     counts = np.concatenate([one.tracks.n_positions for one in members])
     judged = counts >= 2
-    every = _data(members, judged, clock)
+    every = data_of(members, judged, clock)
     if "stop_rate" in names:
         most = 1 / (_SHORTEST_PAUSE_FRAMES * members[0].source.frame_s)
         limits = dict.fromkeys(("stop_rate", "go_rate"), (0.0, most))
@@ -166,15 +170,15 @@ def _fit_group(
     for _ in range(_ROUNDS):
         before = used.copy()
         # All are judged anew: what is strange to a poor first guess need not stay so.
-        used[judged] = ~_strange(every, start)
+        used[judged] = ~strange(every, start)
         if not used.any():
-            return _failed(len(counts), len(names), "its tracks are too unlike each other to fit")
+            return failed(len(counts), len(names), "its tracks are too unlike each other to fit")
         if np.array_equal(used, before):
             break
-        data = _data(members, used, clock)
+        data = data_of(members, used, clock)
         fit = _with_known(fit_parameters(data, _parameters(start, known)), names, known)
         if fit.problem:
-            return _failed(len(counts), len(names), fit.problem)
+            return failed(len(counts), len(names), fit.problem)
         start = _named(fit)
     mean = _with_mean_over_frames(data, fit, counts, used, held="speed" in known.fixed)
     likely = np.full(len(counts), np.nan)
@@ -214,7 +218,7 @@ def _with_known(fit: LikelihoodFit, names: Sequence[str], known: FitParameters) 
     )
 
 
-def _data(members: Sequence[Kept], used: Bools, clock: Clock) -> GlidingData:
+def data_of(members: Sequence[Kept], used: Bools, clock: Clock) -> GlidingData:
     """The tracks used, one recording after the other."""
     rows = np.repeat(used, np.concatenate([one.tracks.n_positions for one in members]))
     counts = np.concatenate([one.tracks.n_positions for one in members])[used]
@@ -237,7 +241,7 @@ def _named(fit: LikelihoodFit) -> dict[str, float]:
     return dict(zip(fit.names, map(float, fit.values), strict=True))
 
 
-def _strange(data: GlidingData, values: Mapping[str, float]) -> Bools:
+def strange(data: GlidingData, values: Mapping[str, float]) -> Bools:
     """Tracks that these parameters make far less likely than the others, (m,).
 
     Among very few there is no usual track, so none of them is strange.
@@ -318,7 +322,7 @@ def _own_speed(mean: Floats, sd: Floats, population: float) -> tuple[Floats, Flo
         )
 
 
-def _failed(n_tracks: int, n_names: int, problem: str) -> ChamberLikelihood:
+def failed(n_tracks: int, n_names: int, problem: str) -> ChamberLikelihood:
     none = np.full(n_tracks, np.nan)
     return ChamberLikelihood(
         values=np.full(n_names, np.nan),

@@ -128,6 +128,8 @@ def _length(factor: float) -> Callable[[float], float]:
 _STRAIGHT = "not resolved: the paths are straight within the noise"
 _NOISE = "not resolved: longitudinal diffusion and localization error trade against each other here"
 
+# The speed where nothing drives filaments: its square may come out below 0, and then it is 0.
+SPEED_OF_PASSIVE = "speed of passive"
 RULES = {
     "speed_um_s": _Rule(columns=("speed",), scale=lambda v: v, below=0.0, relative_to="value"),
     "rotational_diffusion_rad2_s": _Rule(
@@ -187,6 +189,8 @@ RULES = {
     ),
     "stop_rate_per_s": _Rule(columns=("stop_rate",), scale=lambda rate: rate, below=0.0),
     "go_rate_per_s": _Rule(columns=("go_rate",), scale=lambda rate: rate, below=0.0),
+    "diffusion_um2_s": _Rule(columns=("diffusion",), scale=lambda d: d, below=0.0),
+    SPEED_OF_PASSIVE: _Rule(columns=("squared_speed",), scale=lambda s: s, back=_root),
     "sideways_diffusion_um2_s": _Rule(
         columns=("sideways_diffusion",), scale=lambda d: d, below=0.0, unresolved=_NOISE
     ),
