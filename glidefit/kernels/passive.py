@@ -83,15 +83,16 @@ def diffusing_log_density(
 def directedness(
     frame: Ints, offsets: Ints, x: Floats, y: Floats, *, noise: float
 ) -> tuple[Floats, Floats]:
-    """What each track adds to the products of successive displacements, and to their squares.
+    """How much successive displacements of each track have in common, and of how many.
 
-    The sum of the products over that of the squares is 1 for straight paths and 0 for diffusion.
-    Displacements are taken over so many frames that they stand out of the noise.
+    The mean of their products over that of their squares: 1 for a straight path and 0 for
+    diffusion, within 1 / √(2 n) of n. They are taken over so many frames that they stand out of
+    the noise.
 
     Returns
     -------
-    products, squares : (m,) arrays
-        In µm².
+    share, number : (m,) arrays
+        NaN where there are none; pairs that overlap count as so many that do not.
     """
     lag, z = 1, x + 1j * y
     while True:
@@ -111,10 +112,10 @@ def directedness(
     one, two = z[j] - z[i], z[k] - z[j]
     owner = np.repeat(np.arange(len(offsets) - 1), np.diff(offsets))[j]
     m = len(offsets) - 1
-    return (
-        _by_track(owner, (one * two.conj()).real, m),
-        _by_track(owner, (np.abs(one) ** 2 + np.abs(two) ** 2) / 2, m),
-    )
+    products = _by_track(owner, (one * two.conj()).real, m)
+    squares = _by_track(owner, (np.abs(one) ** 2 + np.abs(two) ** 2) / 2, m)
+    share = np.where(squares > 0, products / np.where(squares > 0, squares, 1.0), np.nan)
+    return share, np.bincount(owner, minlength=m) / lag
 
 
 def _by_track(owner: Ints, values: Floats, m: int) -> Floats:

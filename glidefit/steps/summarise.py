@@ -266,7 +266,7 @@ def spread_by_level(combined: Combined, columns: Mapping[str, int]) -> tuple[Lev
             relative_error=float(error[columns[name]] / combined.value[columns[name]]),
         )
         for quantity, name in _SPREAD_OF.items()
-        if name in columns
+        if name in columns and combined.value[columns[name]] > 0
         for level, error in combined.level_error.items()
     )
 

@@ -214,3 +214,67 @@ def test_where_only_pauses_can_be_fitted_they_are():
     nothing = likely(np.nan, np.nan)
     assert compare_pauses(np.nan, [nothing], [likely(1.0, 2.0)], np.array([0.1])).seen
     assert not compare_pauses(np.nan, [nothing], [nothing], np.array([np.nan])).seen
+
+
+# -- without propulsion ---------------------------------------------------------------------------
+
+
+def analysed_floating(settings=None, *, seed=1, **scenario):
+    condition = ScenarioCondition(
+        name="c", speed_um_s=0.8, rotational_diffusion_rad2_s=0.008, control=True
+    )
+    them = Scenario(
+        name="s",
+        conditions=(condition,),
+        frame_s=0.5,
+        exposure_s=0.1,
+        n_frames=120,
+        chambers_per_day=1,
+        **{"detached_fraction": 1.0} | scenario,
+    )
+    rng = np.random.default_rng(seed)
+    return experiment(them, settings=settings or Settings(), rng=rng)["c"]
+
+
+@pytest.mark.parametrize("diffusion", [0.5, 0.01])
+def test_floating_filaments_are_passive_and_diffuse_as_they_do(diffusion):
+    found = analysed_floating(detached_diffusion_um2_s=diffusion)
+    assert found.fitted.model == "passive"
+    assert found.fitted.problems == ()
+    known = found.estimates
+    assert_allclose(known["diffusion_um2_s"].value, diffusion, rtol=0.1)
+    # Compatible with nothing, and far below that of gliding filaments.
+    assert known["speed_um_s"].low == 0
+    assert known["speed_um_s"].value < 0.15
+    assert known["motile_fraction"].value == 0
+    for key in ("rotational_diffusion_rad2_s", "persistence_length_um", "mean_speed_um_s"):
+        assert known[key].problem == "not fitted: the tracks show no directed motion"
+    checks = summarise.model_checks(
+        found.fitted.innovation, found.combined, found.fitted.columns, model="passive"
+    )
+    assert all(check.holds for check in checks)
+    (curve,) = found.fitted.curves
+    measured, predicted = found.combined.value[curve.msd], found.combined.value[curve.model]
+    assert_allclose(measured[curve.fitted][:10], predicted[curve.fitted][:10], rtol=0.1)
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+@pytest.mark.parametrize("floating", [0.0, 0.5])
+def test_gliding_filaments_are_not_passive_though_others_float(seed, floating):
+    found = analysed_floating(seed=seed, detached_fraction=floating)
+    assert found.fitted.model == "active"
+    (direction,) = [one for one in found.fitted.evidence if one.model == "passive"]
+    assert direction.value == 0
+    assert_allclose(found.estimates["speed_um_s"].value, 0.8, rtol=0.2)
+
+
+def test_passive_may_be_forced_and_its_problems_show():
+    found = analysed_floating(Settings(fit=FitSettings(model="passive")), detached_fraction=0.0)
+    assert found.fitted.model == "passive"
+    assert found.estimates["speed_um_s"].low > 0.4
+    checks = summarise.model_checks(
+        found.fitted.innovation, found.combined, found.fitted.columns, model="passive"
+    )
+    assert not all(check.holds for check in checks)
+    active = analysed_floating(Settings(fit=FitSettings(model="active")))
+    assert active.fitted.model == "active"

@@ -83,12 +83,14 @@ def estimates() -> dict[str, Estimate]:
         "running_fraction": (0.9848, 0.9701, 0.9995),
         "stop_rate_per_s": (0.0154, 0.0052, 0.0256),
         "go_rate_per_s": (NAN, NAN, NAN),
+        "diffusion_um2_s": (NAN, NAN, NAN),
         "turning_rate_rad_s": (-0.0004, -0.0061, 0.0053),
         "sideways_diffusion_um2_s": (NAN, NAN, NAN),
         "further_error_along_um": (NAN, NAN, NAN),
         "frame_speed_um_s": (0.8531, 0.8204, 0.8858),
     }
     problems = {
+        "diffusion_um2_s": "The filaments are driven.",
         "go_rate_per_s": "Pauses are shorter than a frame.",
         "sideways_diffusion_um2_s": "A filament follows its path.",
         "further_error_along_um": "Taken as equal in all directions.",

@@ -27,10 +27,13 @@ from glidefit.steps.fit.likelihood import (
 Floats = NDArray[np.float64]
 
 PASSIVE = "passive"
-# Successive displacements of gliding filaments have this much in common, relative to their
-# squares, and far more; of those that float and happen to look directed, less.
-_DIRECTED = 0.2
-# Without propulsion are conditions of which so many chambers have less.
+# A track is directed if successive displacements have this share of their squares in common, and
+# there are so many of them that diffusion has it in 1 of 1000.
+_DIRECTED, _FEWEST_PAIRS = 0.5, 10
+# A chamber has no propulsion if less than this share of the filament-frames of its kept tracks is
+# of directed ones: tracks that float and happen to look directed for some time.
+_SHARE = 0.03
+# Without propulsion are conditions of which so many chambers are.
 _CHAMBERS = 2 / 3
 # Where no track glides at all, those that float are worth a fit if there are so many, with this
 # share of the filament-frames.
@@ -43,13 +46,13 @@ class Propulsion:
 
     Parameters
     ----------
-    direction : float
-        Mean product of successive displacements over their mean square, mean of the chambers.
+    directed : float
+        Share of the filament-frames of kept tracks that are of directed ones, mean over chambers.
     undirected : float
-        Share of the chambers in which it is too little for gliding.
+        Share of the chambers in which it is too little for gliding, of those that can tell.
     """
 
-    direction: float
+    directed: float
     undirected: float
     forced: str = ""  # the model that a setting asks for
 
@@ -68,9 +71,10 @@ class Propulsion:
                 value=self.undirected,
                 needed=_CHAMBERS,
                 speaks_for=self.undirected >= _CHAMBERS,
-                meaning="Share of the chambers in which successive displacements have less than "
-                f"{_DIRECTED:g} of their squares in common; straight paths have 1, diffusion 0. "
-                f"Their mean is {self.direction:.2g}.",
+                meaning=f"Share of the chambers in which less than {_SHARE:.0%} of the filament-"
+                f"frames are of directed tracks: successive displacements have more than "
+                f"{_DIRECTED:.0%} of their squares in common, of straight paths all, of diffusion "
+                f"nothing. Here {self.directed:.0%} are.",
             ),
         )
 
@@ -78,22 +82,27 @@ class Propulsion:
 def look_for_propulsion(chambers: Sequence[Sequence[Kept]], settings: FitSettings) -> Propulsion:
     """Direction of the kept tracks, chamber by chamber; a forced model stands whatever it says."""
     forced = "" if settings.model == "auto" and settings.method == "likelihood" else settings.model
-    each = np.array([_direction(members) for members in chambers])
+    each = np.array([_directed(members) for members in chambers])
     told = each[np.isfinite(each)]
     return Propulsion(
-        direction=float(told.mean()) if len(told) else float("nan"),
-        undirected=float((told < _DIRECTED).sum() / len(each)),
+        directed=float(told.mean()) if len(told) else float("nan"),
+        undirected=float((told < _SHARE).mean()) if len(told) else 0.0,
         forced=forced,
     )
 
 
-def _direction(members: Sequence[Kept]) -> float:
-    products, squares = 0.0, 0.0
+def _directed(members: Sequence[Kept]) -> float:
+    """Share of the filament-frames, of tracks long enough to tell; NaN if there are none."""
+    directed, told = 0, 0
     for one in members:
         t = one.tracks
-        found = directedness(t.frame, t.offsets, t.x_um, t.y_um, noise=one.source.clean.noise_um)
-        products, squares = products + found[0].sum(), squares + found[1].sum()
-    return float(products / squares) if squares > 0 else float("nan")
+        share, pairs = directedness(
+            t.frame, t.offsets, t.x_um, t.y_um, noise=one.source.clean.noise_um
+        )
+        long = pairs >= _FEWEST_PAIRS
+        told += int(t.n_positions[long].sum())
+        directed += int(t.n_positions[long & (share > _DIRECTED)].sum())
+    return directed / told if told else float("nan")
 
 
 def with_floating(
